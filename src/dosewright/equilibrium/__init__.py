@@ -1,0 +1,28 @@
+"""Aqueous equilibrium of one vessel or of a batch, with a certificate for each.
+
+`equilibrate` and `equilibrate_batch` are the public face; `vessel.solve` is the array form that
+the plant model uses. This package knows no flowsheet.
+"""
+
+from dosewright.equilibrium.answers import (
+    Amounts,
+    Batch,
+    Certificate,
+    Equilibrium,
+    certify,
+    equilibrate,
+    equilibrate_batch,
+)
+from dosewright.equilibrium.vessel import States, solve
+
+__all__ = [
+    "Amounts",
+    "Batch",
+    "Certificate",
+    "Equilibrium",
+    "States",
+    "certify",
+    "equilibrate",
+    "equilibrate_batch",
+    "solve",
+]
