@@ -14,11 +14,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dosewright.cautions import Caution, cautions_of
-from dosewright.chemistry.activity import LN10, WATER_KG_PER_MOL
-from dosewright.equilibrium import certify
+from dosewright.chemistry.activity import WATER_KG_PER_MOL
 from dosewright.errors import Fault, InputError, NotConverged
 from dosewright.flowsheet import Flowsheet, Product, check_decisions
 from dosewright.plant import ChargeClosure, Orders, PlantModel, Run, Stream, simulate
+from dosewright.streams import StageReport, StreamRow, balance_of, stage_reports, stream_table
 
 Array = NDArray[np.float64]
 
@@ -366,49 +366,6 @@ class CostLine:
 
 
 @dataclass(frozen=True)
-class StreamRow:
-    """One stream of the stream table.
-
-    ``dissolved_mg_per_L`` and ``total_mol_per_h`` by component (as its own formula),
-    ``solids_kg_per_h`` by solid.
-    """
-
-    number: int
-    name: str
-    kind: str
-    liquor_m3_per_h: float
-    water_kg_per_h: float
-    pH: float | None
-    dry_solids_kg_per_h: float
-    dissolved_mg_per_L: dict[str, float]
-    total_mol_per_h: dict[str, float]
-    solids_kg_per_h: dict[str, float]
-
-
-@dataclass(frozen=True)
-class StageReport:
-    """What one stage does: doses in, pH, solids, what scales."""
-
-    number: int
-    destination: str
-    oxidant: str | None
-    pH: float
-    ionic_strength_mol_per_kg: float
-    doses_kg_per_h: dict[str, float]
-    doses_kg_per_m3: dict[str, float]
-    oxidant_kg_per_h: float
-    oxidised_mol_per_h: float
-    vented_mol_per_h: dict[str, float]
-    heat_K: float
-    solids_kg_per_h: dict[str, float]
-    cake_dry_kg_per_h: float
-    cake_wet_kg_per_h: float
-    cake_percent_dry: dict[str, float]
-    saturation_log10: dict[str, float]
-    certificate: dict[str, float]
-
-
-@dataclass(frozen=True)
 class Trial:
     """One train, solved in full: cost, limits, streams.
 
@@ -453,6 +410,8 @@ def orders_of(model: PlantModel, decisions: Mapping[str, Any]) -> tuple[Orders, 
             i = reagents.index(name)
             if "pH" in amount:
                 target[0, k], lead[0, k] = float(amount["pH"]), i
+            elif "dose_kg_per_h" in amount:
+                dose[0, k, i] = float(amount["dose_kg_per_h"])
             else:
                 dose[0, k, i] = float(amount["dose_kg_per_m3"]) * flowsheet.feed.flow_m3_per_h
         if stage.get("oxidant"):
@@ -516,8 +475,6 @@ def evaluate_on(model: PlantModel, decisions: Mapping[str, Any]) -> Trial:
 
 def report_run(run: Run, destinations: Sequence[str]) -> Trial:
     """Write the one trial of ``run`` out as a `Trial`."""
-    from dosewright.streams import balance_of, stage_reports, stream_table  # noqa: PLC0415
-
     model = run.model
     books = account(run, destinations)
     limits = [_limit(row) for row in books.limits]
@@ -562,36 +519,3 @@ def _limit(row: LimitBatch) -> Limit:
         row.name, row.where, row.sense, value, row.bound, row.unit,
         margin=sign * (row.bound - value), met=float(row.excess[0]) <= MET_TOLERANCE,
     )  # fmt: skip
-
-
-def certificate_of(run: Run, stage: int) -> dict[str, float]:
-    """Certificate figures of one vessel of a one-trial run."""
-    this = run.stages[stage]
-    states = this.states
-    kg = this.solvent_kg_per_h[:, None]
-    # the totals the vessel was given, rebuilt from its own outflows
-    system = run.model.system
-    given = (
-        this.pulp.totals
-        + this.pulp.solids @ system.A[: system.solids_count]
-        + this.vented_mol_per_h @ system.A[system.solids_count :]
-    ) / kg
-    figures = certify(states, given, run.model.enabled, ln_pressure=run.model.ln_pressure)
-    return {
-        "balance_residual": float(figures.balance_residual[0]),
-        "mass_action_residual_ln": float(figures.mass_action_residual_ln[0]),
-        "charge_residual_eq_per_kg": float(figures.charge_residual_eq_per_kg[0]),
-        "present_gap_log10": float(figures.present_gap_log10[0]),
-        "supersaturation_log10": float(max(figures.supersaturation_log10[0], -300.0)),
-    }
-
-
-def saturation_log10(run: Run, stage: int, row: int = 0) -> dict[str, float]:
-    """log10(Q/K) of every solid that the stage's components could form."""
-    values = run.stages[stage].states.ln_saturation()[row] / LN10
-    system = run.model.system
-    return {
-        name: float(v)
-        for name, v in zip(system.solids, values[: system.solids_count], strict=True)
-        if np.isfinite(v)
-    }
