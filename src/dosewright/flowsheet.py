@@ -107,13 +107,17 @@ class Oxidant:
 
 @dataclass(frozen=True)
 class Product:
-    """A cake that is sold when it meets its limits (fractions, dry basis)."""
+    """A cake that is sold when it meets its limits (fractions, dry basis).
+
+    ``min_family`` asks for a least share of a family of solids, for instance of sulfides.
+    """
 
     name: str
     metals: tuple[str, ...]
     min_recovery: float | None
     min_grade: float | None
     max_impurity: Mapping[str, float]
+    min_family: Mapping[str, float]
     payable: Mapping[str, float]
     optional: bool
 
@@ -449,6 +453,15 @@ def _basis_mass(basis: str, label: Label) -> float:
     return molar_mass_g_per_mol(basis) * own[key] / other[key]
 
 
+def _families(r: _Reading, where: str, value: Any) -> dict[str, float]:
+    out = _by_name("fraction", labels=False)(r, where, value)
+    for name in [n for n in out if n not in FAMILIES]:
+        close = difflib.get_close_matches(name, FAMILIES, 1)
+        hint = f"did you mean {close[0]}?" if close else f"known: {', '.join(FAMILIES)}"
+        r.fault(_join(where, name), "is no family of solids", hint)
+    return out
+
+
 _PAYABLE_HINT = 'write "50 %" or { Ni = "78 %" }'
 
 
@@ -525,6 +538,7 @@ _KEYS: dict[str, dict[str, _Key]] = {
         "min_recovery": _Key(_quantity("fraction")),
         "min_grade": _Key(_quantity("fraction")),
         "max_impurity": _Key(_by_name("fraction"), False, {}),
+        "min_family": _Key(_families, False, {}),
         "payable": _Key(_payable, False, {}),
         "optional": _Key(_flag, False, False),
     },
@@ -825,7 +839,7 @@ def _read_products(
         out.append(
             Product(
                 t["name"], t["metals"], t["min_recovery"], t["min_grade"], t["max_impurity"],
-                payable or {}, t["optional"],
+                t["min_family"], payable or {}, t["optional"],
             )  # fmt: skip
         )
     return tuple(out)

@@ -66,7 +66,8 @@ class Stream:
 
     ``totals`` (N, nc) mol/h of the components dissolved in the liquor and ``water`` (N,) mol/h of
     H2O in all its dissolved forms; ``solids`` (N, ks) mol/h of precipitates; ``unreacted`` (N, R)
-    mol/h of reagent left over as solid and ``idle`` (N, R) mol/h left over in solution; ``inert``
+    mol/h of reagent left over as solid and ``idle`` (N, R) mol/h spent in solution without effect
+    (carbonated, oxidised: it weighs as salt, but is no longer counted as what it was); ``inert``
     (N,) kg/h of insoluble impurity; ``gas`` (N, gases) mol/h.
     """
 
@@ -210,6 +211,11 @@ class PlantModel:
         """Molar masses (ks,)."""
         data = catalogue().solids
         return np.array([data[s].molar_mass_g_per_mol for s in self.system.solids])
+
+    def in_family(self, family: str) -> Array:
+        """One for the solids of a family, zero for the others (ks,)."""
+        data = catalogue().solids
+        return np.array([float(data[s].family == family) for s in self.system.solids])
 
     @cached_property
     def water_per_dry_kg(self) -> Array:

@@ -82,7 +82,7 @@ def _row(
     everything = (
         totals
         + stream.solids[0] @ system.A[:ks]
-        + ((stream.unreacted + stream.idle) @ model.reagent_components)[0]
+        + (stream.unreacted @ model.reagent_components)[0]
     )
     mg_per_L = grams * 1000.0 / litres if litres > 0.0 else np.zeros_like(grams)
     return StreamRow(
@@ -183,7 +183,7 @@ def _cake_composition(model: PlantModel, cake: Stream, dry_kg: float) -> dict[st
     mol = (
         cake.solids[0] @ model.system.A[:ks]
         + cake.totals[0]
-        + ((cake.unreacted + cake.idle) @ model.reagent_components)[0]
+        + (cake.unreacted @ model.reagent_components)[0]
     )
     percent = mol * model.component_g_per_mol / 10.0 / dry_kg
     return _named(model.system.components, np.where(abs(percent) < 1e-12, 0.0, percent))

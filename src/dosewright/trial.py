@@ -81,6 +81,7 @@ class CakeFigures:
     """Masses of one cake, (N,) kg/h unless said otherwise."""
 
     element_kg: Mapping[str, Array]
+    family_kg: Mapping[str, Array]
     dry_kg: Array
     wet_kg: Array
 
@@ -102,11 +103,14 @@ def cake_figures(model: PlantModel, cake: Stream, solvent: Array) -> CakeFigures
     components = (
         cake.solids @ model.system.A[:ks]
         + cake.totals
-        + (cake.unreacted + cake.idle) @ model.reagent_components
+        + cake.unreacted @ model.reagent_components
     )
     labels = {m for p in model.flowsheet.products for m in (*p.metals, *p.max_impurity)}
     kg = {label: label_kg_per_h(model, label, components) for label in labels}
-    return CakeFigures(kg, dry, dry + solvent)
+    families = {f for p in model.flowsheet.products for f in p.min_family}
+    each = cake.solids * model.solid_g_per_mol / 1000.0
+    of_family = {f: each @ model.in_family(f) for f in families}
+    return CakeFigures(kg, of_family, dry, dry + solvent)
 
 
 def _effluent_limits(run: Run) -> list[LimitBatch]:
@@ -122,7 +126,7 @@ def _effluent_limits(run: Run) -> list[LimitBatch]:
     solvent = solvent_kg_per_h(run)
     litres = model.volume_L_per_h(run.effluent, solvent)
     ks = model.system.solids_count
-    dissolved = run.effluent.totals + run.effluent.idle @ model.reagent_components
+    dissolved = run.effluent.totals
     fines = (
         run.effluent.solids @ model.system.A[:ks]
         + run.effluent.unreacted @ model.reagent_components
@@ -229,6 +233,14 @@ def _product_limits(
             LimitBatch(
                 f"{label} dry", where, "max", 100.0 * kg[label] / safe_dry, 100.0 * ceiling, "%",
                 100.0 * ceiling,
+            )  # fmt: skip
+        )
+    for family, least in product.min_family.items():
+        share = _sum([c.family_kg[family] for c in cakes], count) / safe_dry
+        limits.append(
+            LimitBatch(
+                f"{family} solids dry", where, "min", 100.0 * share, 100.0 * least, "%",
+                100.0 * least,
             )  # fmt: skip
         )
     return limits, {m: kg[m] for m in product.metals}

@@ -10,16 +10,17 @@ how far the linear model and the exact one agree.
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
 from dosewright.design import Design, SearchRecord
-from dosewright.errors import InputError, Fault
+from dosewright.errors import Fault, InputError
 from dosewright.flowsheet import Flowsheet
 from dosewright.plant import PlantModel, lead_coordinate
-from dosewright.search.anchors import Anchors, anchors_of_run, feed_anchors
+from dosewright.search.anchors import Anchors, anchors_of_run, feed_anchors, thinned
 from dosewright.search.lattice import Lattice, Proposal
 from dosewright.search.polish import (
     Polished,
@@ -32,20 +33,25 @@ from dosewright.trial import decisions_of, evaluate_on
 
 Progress = Callable[[str], None]
 
-MAX_PROPOSALS = 18  # per search, over all numbers of stages
-STALE_PROPOSALS = 6  # proposals in a row without a better train after which variation begins
-LATTICE_MARGIN = 1.10  # the lattice is off by some per cent; it stops once this far above the best
-LATTICE_SECONDS = 4.0  # for one proposal; the incumbent is as good a suggestion as the optimum
-MAX_ROUNDS = 4  # of variation
+LATTICE_ANCHORS = {1: 100, 2: 100, 3: 45}  # by number of stages: more stages, coarser anchors
+LATTICE_SECONDS = 6.0  # for one proposal; the incumbent is as good a suggestion as the optimum
+PROPOSALS = {1: 2, 2: 5}  # by number of stages
+PROPOSALS_LONGER = 4
+LATTICE_SHARE = 0.4  # of the time
+RESERVE_S = 8.0  # kept for the last polish and for re-anchoring
+IDLE_DOSE_KG_PER_M3 = 1e-5  # below which a stage does nothing and is struck out
+WORTH_MOVING = 1e-4  # relative gain for which the search moves to a neighbour
 
 
 @dataclass(eq=False)
 class _Search:
+    """The state of one search: what was polished, what is best."""
+
     model: PlantModel
     anchors: Anchors
     deadline: float
     say: Progress
-    rng: np.random.Generator
+    seed: int
     done: dict[Structure, Polished] = field(default_factory=dict)
     best: Polished | None = None
     proposals: int = 0
@@ -56,43 +62,84 @@ class _Search:
     def time_left_s(self) -> float:
         return self.deadline - time.monotonic()
 
-    def better(self, a: Polished) -> bool:
-        """Whether ``a`` beats the best so far: feasible first, then cost, then least missed."""
-        b = self.best
-        if b is None or a.feasible != b.feasible:
-            return b is None or a.feasible
-        if a.feasible:
-            return a.cost_USD_per_h < b.cost_USD_per_h - 1e-9 * abs(b.cost_USD_per_h)
-        return a.excess < b.excess
+    def rng_of(self, structure: Structure) -> np.random.Generator:
+        """Random numbers that depend on the structure alone, not on what was tried before."""
+        places = ["waste", *(p.name for p in self.model.flowsheet.products)]
+        flat = [
+            n for s in structure for n in (s.reagent + 1, s.oxidant + 1, places.index(s.destination))
+        ]
+        return np.random.default_rng([self.seed, *flat])
 
-    def try_structure(
-        self, structure: Structure, *, starts: int, samples: int, hints: list | None = None
-    ) -> bool:
-        """Polish a structure; return whether it is the new best."""
+    def polish(self, structure: Structure, **options: Any) -> Polished:
+        """Polish a structure and remember the result when it is the best known of it."""
         result = polish_structure(
             self.model,
             structure,
-            rng=self.rng,
+            rng=self.rng_of(structure),
             ln_activity=self.anchors.ln_activity,
-            hints=hints or [],
-            samples=samples,
-            starts=starts,
+            **options,
         )
         self.evaluations += result.evaluations
         earlier = self.done.get(structure)
-        if earlier is None or _ahead(result, earlier):
+        if earlier is None or ahead(result, earlier):
             self.done[structure] = result
-        if self.better(result):
+        if self.best is None or ahead(result, self.best):
             self.best = result
             self.say(f"{train_text(self.model, structure)}: {verdict(result)}")
-            return True
-        return False
+        return self.done[structure]
+
+    def trimmed(self, result: Polished) -> Polished:
+        """Strike out stages that came out of the polish with nothing to do."""
+        flow = self.model.flowsheet.feed.flow_m3_per_h
+        idle = [
+            step.reagent >= 0
+            and step.oxidant < 0
+            and result.dose_kg_per_h[k, step.reagent] < IDLE_DOSE_KG_PER_M3 * flow
+            for k, step in enumerate(result.structure)
+        ]
+        if not any(idle) or all(idle):
+            return result
+        shorter = tuple(s for s, i in zip(result.structure, idle, strict=True) if not i)
+        if shorter in self.done:
+            return self.done[shorter]
+        kept = [k for k, i in enumerate(idle) if not i]
+        return self.polish(shorter, **_quick(known_of(result, shorter, kept)))
 
 
-def _ahead(a: Polished, b: Polished) -> bool:
+def _quick(known: tuple[np.ndarray, np.ndarray]) -> dict[str, Any]:
+    """Options of a quick polish: few starts, near what is known."""
+    return {"known": known, "samples": 12, "starts": 3, "iterations": 25}
+
+
+def known_of(
+    result: Polished, structure: Structure, origin: Sequence[int]
+) -> tuple[np.ndarray, np.ndarray]:
+    """Coordinates and doses of ``structure`` as far as they stand in ``result``.
+
+    ``origin[k]`` is the stage of ``result`` that stage k was, or -1 for a new one.
+    """
+    columns: dict[int, int] = {}
+    for k, step in enumerate(result.structure):
+        if step.reagent >= 0:
+            columns[k] = len(columns)
+    u, dose = [], []
+    for k, step in enumerate(structure):
+        if step.reagent < 0:
+            continue
+        source = origin[k]
+        same = source in columns and result.structure[source].reagent == step.reagent
+        u.append(result.coordinates[columns[source]] if same else np.nan)
+        dose.append(result.dose_kg_per_h[source, step.reagent] if same else np.nan)
+    return np.array(u), np.array(dose)
+
+
+def ahead(a: Polished, b: Polished, margin: float = 1e-9) -> bool:
+    """Whether ``a`` beats ``b``: feasible first, then cost, or what is missed."""
     if a.feasible != b.feasible:
         return a.feasible
-    return a.cost_USD_per_h < b.cost_USD_per_h if a.feasible else a.excess < b.excess
+    if a.feasible:
+        return a.cost_USD_per_h < b.cost_USD_per_h - margin * abs(b.cost_USD_per_h)
+    return a.excess < b.excess * (1.0 - margin)
 
 
 def verdict(result: Polished) -> str:
@@ -125,7 +172,7 @@ def optimise(
     Parameters
     ----------
     time_limit_s: after which the best train so far is returned; the work is otherwise bounded by
-        counts, so that the same file gives the same design.
+        counts.
     seed: of the sampled starting doses.
     progress: called with one line of text now and then.
 
@@ -150,51 +197,52 @@ def optimise(
     say = progress or (lambda _text: None)
     say("titrating the feed for anchors")
     anchors = feed_anchors(model)
-    search = _Search(model, anchors, began + time_limit_s, say, np.random.default_rng(seed))
-    search.say(f"{anchors.count} anchors; lattice programs for up to {_positions(flowsheet)} stages")
-    _propose_and_polish(search, anchors)
-    _vary(search)
-    agreement = _agreement(search, anchors)
-    assert search.best is not None  # at least one structure is always tried
-    return _design(search, agreement, began)
+    search = _Search(model, anchors, began + time_limit_s, say, seed)
+    say(f"{anchors.count} anchors; lattice programs for up to {flowsheet.plant.max_stages} stages")
+    seeds = _propose(search, time_limit_s)
+    _descend(search, seeds)
+    best = search.best
+    assert best is not None  # the descent polishes at least one train
+    search.polish(
+        best.structure,
+        hints=[(best.coordinates, _lead_doses(search, best))],
+        samples=64,
+        starts=12,
+        iterations=150,
+    )
+    return _design(search, _agreement(search))
 
 
-def _positions(flowsheet: Flowsheet) -> int:
-    return flowsheet.plant.max_stages
-
-
-def _propose_and_polish(search: _Search, anchors: Anchors) -> None:
-    """Draw structures from the lattices, cheapest first, until they stop paying."""
-    lattices = {
-        k: Lattice(search.model, anchors, k) for k in range(1, _positions(search.model.flowsheet) + 1)
-    }
-    waiting: dict[int, Proposal] = {}
-    stale = 0
-    budget = 0.45 * search.time_left_s
-    stop = time.monotonic() + budget
-    while search.proposals < MAX_PROPOSALS and stale < STALE_PROPOSALS:
-        for k in [k for k in lattices if k not in waiting]:
-            found = lattices[k].propose(LATTICE_SECONDS)
-            if found is None:
-                del lattices[k]
-            else:
-                waiting[k] = found
-        if not waiting or (time.monotonic() > stop and search.best is not None):
-            break
-        k = min(waiting, key=lambda k: waiting[k].value_USD_per_h)
-        proposal = waiting.pop(k)
-        lattices[k].forbid(proposal.structure)
-        best = search.best
-        if best is not None and best.feasible:
-            margin = (LATTICE_MARGIN - 1.0) * abs(best.cost_USD_per_h)
-            if proposal.value_USD_per_h > best.cost_USD_per_h + margin:
+def _propose(search: _Search, time_limit_s: float) -> list[Polished]:
+    """Draw structures from the lattices and polish them; return the best of each length."""
+    best: dict[int, Polished] = {}
+    most = search.model.flowsheet.plant.max_stages
+    stop = search.deadline - (1.0 - LATTICE_SHARE) * time_limit_s
+    for k in range(1, most + 1):
+        anchors = thinned(search.anchors, LATTICE_ANCHORS.get(k, 24))
+        lattice = Lattice(search.model, anchors, k)
+        for drawn in range(PROPOSALS.get(k, PROPOSALS_LONGER)):
+            if time.monotonic() > stop:
                 break
-        search.proposals += 1
-        hints = _hint(search.model, anchors, proposal)
-        gained = search.try_structure(proposal.structure, starts=10, samples=48, hints=hints)
-        if gained:
-            search.lattice_value = proposal.value_USD_per_h
-        stale = 0 if gained else stale + 1
+            found = lattice.propose(LATTICE_SECONDS)
+            if found is None and drawn == 0 and anchors.count < search.anchors.count:
+                # too coarse to hold any train: all anchors, before giving up on this length
+                anchors = search.anchors
+                lattice = Lattice(search.model, anchors, k)
+                found = lattice.propose(LATTICE_SECONDS)
+            if found is None:
+                break
+            lattice.forbid(found.structure)
+            search.proposals += 1
+            before = search.best
+            hints = _hint(search.model, anchors, found)
+            result = search.polish(found.structure, hints=hints, samples=32, starts=8)
+            if search.best is not before:
+                search.lattice_value = found.value_USD_per_h
+            result = search.trimmed(result)
+            if k not in best or ahead(result, best[k]):
+                best[k] = result
+    return list(best.values())
 
 
 def _hint(model: PlantModel, anchors: Anchors, proposal: Proposal) -> list:
@@ -214,77 +262,72 @@ def _hint(model: PlantModel, anchors: Anchors, proposal: Proposal) -> list:
     return [(row, np.array(dose))]
 
 
-def _variations(model: PlantModel, structure: Structure) -> Iterator[Structure]:
-    """Trains that differ from ``structure`` in one choice."""
+def _neighbours(
+    model: PlantModel, structure: Structure
+) -> Iterator[tuple[Structure, tuple[int, ...]]]:
+    """Trains that differ from ``structure`` in one choice, and which stage each stage was."""
     reagents = range(len(model.flowsheet.reagents))
     oxidants = range(-1, len(model.flowsheet.oxidants))
     destinations = ["waste", *(p.name for p in model.flowsheet.products)]
+    count = len(structure)
+    same = tuple(range(count))
+    if count < model.flowsheet.plant.max_stages:
+        for k in range(count, -1, -1):
+            for r in reagents:
+                for d in destinations:
+                    new = (*structure[:k], Step(r, -1, d), *structure[k:])
+                    yield new, (*same[:k], -1, *same[k:])
     for k, step in enumerate(structure):
         def put(new: Step, k: int = k) -> Structure:
             return (*structure[:k], new, *structure[k + 1 :])
 
-        for r in reagents:
-            if r != step.reagent:
-                yield put(Step(r, step.oxidant, step.destination))
-        for o in oxidants:
-            if o != step.oxidant and (step.reagent >= 0 or o >= 0):
-                yield put(Step(step.reagent, o, step.destination))
         for d in destinations:
             if d != step.destination:
-                yield put(Step(step.reagent, step.oxidant, d))
-        if len(structure) > 1:
-            yield (*structure[:k], *structure[k + 1 :])
-        if k + 1 < len(structure):
-            yield (*structure[:k], structure[k + 1], step, *structure[k + 2 :])
-    if len(structure) < model.flowsheet.plant.max_stages:
-        for k in range(len(structure) + 1):
-            for r in reagents:
-                yield (*structure[:k], Step(r, -1, "waste"), *structure[k:])
+                yield put(Step(step.reagent, step.oxidant, d)), same
+        for o in oxidants:
+            if o != step.oxidant and (step.reagent >= 0 or o >= 0):
+                yield put(Step(step.reagent, o, step.destination)), same
+        for r in reagents:
+            if r != step.reagent:
+                yield put(Step(r, step.oxidant, step.destination)), same
+    for k in range(count - 1):
+        swapped = (*structure[:k], structure[k + 1], structure[k], *structure[k + 2 :])
+        yield swapped, (*same[:k], k + 1, k, *same[k + 2 :])
+    if count > 1:
+        for k in range(count):
+            yield (*structure[:k], *structure[k + 1 :]), (*same[:k], *same[k + 1 :])
 
 
-def _vary(search: _Search) -> None:
-    """Vary the best train one choice at a time until nothing is better."""
-    for _ in range(MAX_ROUNDS):
-        if search.best is None:
-            first = Step(0, -1, "waste")
-            search.try_structure((first,), starts=8, samples=48)
-            assert search.best is not None
-        centre = search.best.structure
-        candidates = [s for s in _variations(search.model, centre) if s not in search.done]
-        for structure in candidates:
-            if search.time_left_s < 6.0:
-                return
-            search.try_structure(structure, starts=4, samples=32)
-        # what came close deserves the full number of starts
-        best = search.best
-        close = [
-            s
-            for s in candidates
-            if s in search.done
-            and (
-                not best.feasible
-                or search.done[s].excess < 0.05
-                and search.done[s].cost_USD_per_h
-                < best.cost_USD_per_h + 0.05 * abs(best.cost_USD_per_h)
-            )
-        ]
-        for structure in close[:6]:
-            if search.time_left_s < 6.0:
-                return
-            search.try_structure(structure, starts=12, samples=64)
-        if search.best.structure == centre:
-            break
-    hints = [(search.best.coordinates, _lead_doses(search))]
-    search.try_structure(search.best.structure, starts=16, samples=96, hints=hints)
+def _descend(search: _Search, seeds: list[Polished]) -> None:
+    """From each seed, move to a better train that differs in one choice until there is none."""
+    if not seeds:
+        first = (Step(0, -1, "waste"),)
+        seeds = [search.polish(first, samples=48, starts=8)]
+    queue = sorted(seeds, key=lambda r: (not r.feasible, r.cost_USD_per_h if r.feasible else r.excess))
+    for seed in queue:
+        centre = seed
+        moved = True
+        while moved and search.time_left_s > RESERVE_S:
+            moved = False
+            for structure, origin in _neighbours(search.model, centre.structure):
+                if search.time_left_s < RESERVE_S:
+                    return
+                if structure in search.done:
+                    continue
+                result = search.trimmed(
+                    search.polish(structure, **_quick(known_of(centre, structure, origin)))
+                )
+                if ahead(result, centre, WORTH_MOVING):
+                    centre, moved = result, True
+                    break
 
 
-def _lead_doses(search: _Search) -> np.ndarray:
-    assert search.best is not None
-    problem = TrainProblem(search.model, search.best.structure)
-    return np.array([search.best.dose_kg_per_h[k, problem.lead[k]] for k in problem.dosed])
+def _lead_doses(search: _Search, result: Polished) -> np.ndarray:
+    problem = TrainProblem(search.model, result.structure)
+    return np.array([result.dose_kg_per_h[k, problem.lead[k]] for k in problem.dosed])
 
 
-def _agreement(search: _Search, anchors: Anchors) -> float:
+def _agreement(search: _Search) -> float:
     """Relative difference of the lattice, re-anchored on the winner, from the exact cost.
 
     Where the re-anchored lattice points to other doses, they are polished as well, and the lattice
@@ -296,8 +339,8 @@ def _agreement(search: _Search, anchors: Anchors) -> float:
     difference = float("nan")
     for _ in range(3):
         problem = TrainProblem(search.model, best.structure)
-        run = problem.run_doses(_lead_doses(search)[None, :])
-        joined = anchors_of_run(search.model, run).joined(anchors)
+        run = problem.run_doses(_lead_doses(search, best)[None, :])
+        joined = anchors_of_run(search.model, run).joined(search.anchors)
         lattice = Lattice(search.model, joined, len(best.structure))
         lattice.restrict(best.structure)
         found = lattice.propose(min(6.0, max(search.time_left_s - 1.0, 1.0)))
@@ -307,14 +350,16 @@ def _agreement(search: _Search, anchors: Anchors) -> float:
         hints = _hint(search.model, joined, found)
         if not hints or search.time_left_s < 3.0:
             return difference
-        if not search.try_structure(best.structure, starts=6, samples=16, hints=hints):
-            return difference
+        before = best
+        search.polish(best.structure, starts=6, samples=16, hints=hints)
         best = search.best
+        if best is before:
+            return difference
         assert best is not None
     return difference
 
 
-def _design(search: _Search, agreement: float, began: float) -> Design:
+def _design(search: _Search, agreement: float) -> Design:
     best = search.best
     assert best is not None
     destinations = [step.destination for step in best.structure]
@@ -328,5 +373,4 @@ def _design(search: _Search, agreement: float, began: float) -> Design:
         exact_evaluations=search.evaluations,
         best_cost_USD_per_h=trial.cost_per_hour,
     )
-    del began
     return Design.of(trial, record)

@@ -21,7 +21,8 @@ Array = NDArray[np.float64]
 PH_SPACING = 0.35  # of the anchors along a titration
 SULFIDE_SPACING = 1.5  # decades of free sulfide, along a sulfide titration
 DOSE_POINTS = 60  # solved along each titration before thinning
-MAX_ANCHORS = 90
+TREATED_PH = (5.0, 7.0, 9.0)
+MAX_ANCHORS = 100
 
 
 @dataclass(frozen=True, eq=False)
@@ -171,8 +172,8 @@ def anchors_of_run(model: PlantModel, run: Run) -> Anchors:
 def feed_anchors(model: PlantModel) -> Anchors:
     """Anchors along titrations of the feed with every reagent, and of feeds already treated.
 
-    Liquors treated with each base to a few pHs (solids removed) are titrated again with every
-    reagent, so that sulfate-rich and sulfate-poor, carbonate-rich and sulfide-rich liquors, and
+    Liquors treated with each base to a few pHs, and with every other reagent to a few doses (solids
+    removed), are titrated again with every reagent, so that sulfate-rich and sulfate-poor, carbonate-rich and sulfide-rich liquors, and
     sulfide at several pHs, are all on the lattice.
     """
     system = model.system
@@ -180,26 +181,32 @@ def feed_anchors(model: PlantModel) -> Anchors:
     solvent = float(model.feed.water[0]) * WATER_KG_PER_MOL
     feed = model.feed.totals[0] / solvent
     stoichiometry = model.reagent_components
-    liquors = [feed]
+    liquors = [(-1, feed)]
     for i in range(stoichiometry.shape[0]):
+        states, totals = _titrate(model, feed, stoichiometry[i])
         if stoichiometry[i, h] < 0.0:
-            states, totals = _titrate(model, feed, stoichiometry[i])
-            for pH in (5.0, 7.0, 9.0):
-                row = int(np.argmin(abs(np.where(states.status == 0, states.pH, 99.0) - pH)))
-                left = totals[row] - states.phase_mol_per_kg[row] @ system.A
-                liquors.append(np.where(abs(left) < 1e-15, 0.0, left))
+            rows = [
+                int(np.argmin(abs(np.where(states.status == 0, states.pH, 99.0) - pH)))
+                for pH in TREATED_PH
+            ]
+        else:
+            spaced = _thin(system.components, states)
+            rows = [int(r) for r in spaced[1 :: max(1, (len(spaced) - 1) // 3)][:3]]
+        for row in rows:
+            left = totals[row] - states.phase_mol_per_kg[row] @ system.A
+            liquors.append((i, np.where(abs(left) < 1e-15, 0.0, left)))
     parts: list[Anchors] = []
-    for n, liquor in enumerate(liquors):
+    for n, (treated_with, liquor) in enumerate(liquors):
         for i in range(stoichiometry.shape[0]):
-            is_base = stoichiometry[i, h] < 0.0
-            if n > 0 and is_base and n % 3 != 2:
+            both_bases = stoichiometry[i, h] < 0.0 and stoichiometry[treated_with, h] < 0.0
+            if treated_with >= 0 and both_bases and n % 3 != 2:
                 continue  # one treated liquor per base is enough for the other bases
             states, _ = _titrate(model, liquor, stoichiometry[i])
             parts.append(anchors_of_states(model, states, _thin(system.components, states)))
     joined = parts[0]
     for part in parts[1:]:
         joined = joined.joined(part)
-    return _distinct(joined)
+    return thinned(joined, MAX_ANCHORS)
 
 
 def _titrate(model: PlantModel, liquor: Array, reagent: Array) -> tuple[States, Array]:
@@ -244,8 +251,8 @@ def _thin(components: tuple[str, ...], states: States) -> NDArray[np.int64]:
     return np.array(kept, dtype=np.int64)
 
 
-def _distinct(anchors: Anchors) -> Anchors:
-    """Thin anchors that say the same: cells of pH, sulfide, carbonate and sulfate."""
+def thinned(anchors: Anchors, most: int) -> Anchors:
+    """Keep one anchor in each cell of pH and ligands; cells widen until ``most`` are left."""
     ligands = np.log10(np.maximum(anchors.ligand[:, anchors.metals :], 1e-7))
     spacing = PH_SPACING
     while True:
@@ -253,7 +260,7 @@ def _distinct(anchors: Anchors) -> Anchors:
             [np.round(anchors.pH / spacing), np.round(ligands / max(1.0, 2.0 * spacing))]
         )
         _, first = np.unique(cell, axis=0, return_index=True)
-        if first.size <= MAX_ANCHORS:
+        if first.size <= most:
             break
         spacing *= 1.15
     keep = np.sort(first)

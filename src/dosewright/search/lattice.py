@@ -28,7 +28,10 @@ Array = NDArray[np.float64]
 LIMIT_SLACK = 3.0  # effluent limits are relaxed by this; the exact model enforces the true ones
 QUALITY_SLACK = 0.97  # product limits likewise, by a few per cent
 PH_SLACK = 0.3
-LIGAND_WINDOW = 3.0  # factor around the anchor's dissolved carbonate or sulfide
+#: of the feed's equivalents: anchors are near the liquors met, not on them, and a sulfide dose that
+#: must match its metals to the last per mille would find no anchor at all
+PROTON_SLACK = 0.01
+LIGAND_WINDOW = {"CO3-2": 3.0, "HS-": 6.0}  # factor around what the anchor holds dissolved
 SMALL_MMOL = 1e-3
 LEAST_DOSE = 0.003  # of the largest: a stage that does nothing is a train with one stage fewer
 
@@ -69,6 +72,8 @@ class Lattice:
         if len(iron) == 2:
             a, b = (anchors.tracked.index(c) for c in iron)
             self.cap[b] += self.cap[a]
+        charge = system.component_charge[self.index]
+        self.equivalents = float((self.feed * np.maximum(charge, 0.0)).sum())
         self.dose_max = self._dose_max()
         self.cap += brought.T.clip(min=0.0) @ self.dose_max
         self.solver: Any = None
@@ -78,8 +83,7 @@ class Lattice:
 
     def _dose_max(self) -> Array:
         """Largest sensible dose, mmol per kg: all equivalents of the feed, one and a half times."""
-        charge = self.plant.system.component_charge[self.index]
-        equivalents = float((self.feed * np.maximum(charge, 0.0)).sum()) + abs(self.feed_H)
+        equivalents = self.equivalents + abs(self.feed_H)
         per_mol = np.maximum(abs(self.brought_H), 1.0)
         for i, c in enumerate(self.anchors.tracked):
             if c == "HS-":
@@ -123,6 +127,8 @@ class Lattice:
         m.P = pyo.Var(K, dropping, domain=pyo.NonNegativeReals)
         m.x = pyo.Var(K, domain=pyo.NonNegativeReals)  # oxidised
         m.vent = pyo.Var(K, J, domain=pyo.NonNegativeReals)
+        give = PROTON_SLACK * (self.equivalents + abs(self.feed_H))
+        m.loose = pyo.Var(K, bounds=(-give, give))
         m.cuts = pyo.ConstraintList()
         by_metal: list[list[int]] = [[a for a, t in dropping if t == j] for j in M]
 
@@ -150,10 +156,11 @@ class Lattice:
                 for a in H:
                     if is_metal:
                         m.cuts.add(m.D[k, j, a] <= float(ceiling[a, j]) * m.z[k, a])
-                    elif anchors.tracked[j] in ("CO3-2", "HS-"):
-                        top = anchors.ligand[a, j] * 1e3 * LIGAND_WINDOW + SMALL_MMOL
+                    elif anchors.tracked[j] in LIGAND_WINDOW:
+                        window = LIGAND_WINDOW[anchors.tracked[j]]
+                        top = anchors.ligand[a, j] * 1e3 * window + SMALL_MMOL
                         m.cuts.add(m.D[k, j, a] <= float(min(top, self.cap[j])) * m.z[k, a])
-                        low = anchors.ligand[a, j] * 1e3 / LIGAND_WINDOW - SMALL_MMOL
+                        low = anchors.ligand[a, j] * 1e3 / window - SMALL_MMOL
                         if low > 0.0:
                             m.cuts.add(m.D[k, j, a] >= float(min(low, self.cap[j])) * m.z[k, a])
                     else:
@@ -227,7 +234,7 @@ class Lattice:
             gone = sum(2.0 * m.vent[k, j] for j in range(len(names)) if names[j] in vented)
             stock = self._proton_stock(m, k)
             m.cuts.add(
-                stock + leaving_H + gone
+                stock + leaving_H + gone + m.loose[k]
                 == protons_in
                 + sum(float(self.brought_H[r]) * m.dose[k, r] for r in R)
                 - m.x[k]
@@ -297,6 +304,8 @@ class Lattice:
         m.dry = pyo.Var(K, P, domain=pyo.NonNegativeReals)  # g per kg of feed water
         m.wet = pyo.Var(K, P, domain=pyo.NonNegativeReals)
         m.metal = pyo.Var(K, P, labels, domain=pyo.NonNegativeReals)
+        families = sorted({f for p in flowsheet.products for f in p.min_family})
+        m.family = pyo.Var(K, P, families, domain=pyo.NonNegativeReals)
         for k in K:
             spent = [(r, m.dose[k, r]) for r in range(len(self.reagents))]
             m.cuts.add(
@@ -312,6 +321,18 @@ class Lattice:
             for p in P:
                 m.cuts.add(m.dry[k, p] <= top * m.y[k, p])
                 m.cuts.add(m.wet[k, p] <= 5.0 * top * m.y[k, p])
+            for family in families:
+                member = plant.in_family(family)
+                m.cuts.add(
+                    sum(m.family[k, p, family] for p in P)
+                    == sum(
+                        float(dry[a, t]) * m.P[k, a, t]
+                        for a, t in dropping
+                        if member[self.anchors.solid[a, t]]
+                    )
+                )
+                for p in P:
+                    m.cuts.add(m.family[k, p, family] <= top * m.y[k, p])
             for label in labels:
                 spec = flowsheet.label(label)
                 weights = np.array([spec.components.get(c, 0.0) for c in self.anchors.tracked])
@@ -392,6 +413,10 @@ class Lattice:
                 m.cuts.add(total >= QUALITY_SLACK * product.min_grade * dry)
             for x, ceiling in product.max_impurity.items():
                 m.cuts.add(metal[x] <= ceiling / QUALITY_SLACK * dry + 1e-6)
+            for family, least in product.min_family.items():
+                m.cuts.add(
+                    sum(m.family[k, p, family] for k in K) >= QUALITY_SLACK * least * dry - 1e-6
+                )
             for x, payable in product.payable.items():
                 income += payable * flowsheet.prices.metal_USD_per_t[x] * metal[x]
         return income

@@ -369,11 +369,13 @@ def sampled_starts(
     samples: int,
     keep: int,
     ln_activity: Array,
+    known: tuple[Array, Array] | None = None,
 ) -> tuple[Array, Array]:
     """Coordinates and doses of the best of ``samples`` random dosings of a structure.
 
     The potential's part of each coordinate is drawn from known liquors (``ln_activity``, the
-    anchors'), the dose's part from zero to what the feed can consume.
+    anchors'), the dose's part from zero to what the feed can consume. ``known`` gives coordinates
+    and doses (size,) to keep where they are not NaN.
     """
     u = np.empty((samples, problem.size))
     guess = np.empty((samples, problem.size))
@@ -393,6 +395,9 @@ def sampled_starts(
         per_unit = float(model.feed.water[0]) * WATER_KG_PER_MOL * model.coordinate_eq_per_kg
         equivalents = max(abs(model.reagent_components[lead, h]), 1.0)
         guess[:, column] = part * per_unit / (model.reagent_rates[lead, 0] * equivalents)
+    if known is not None:
+        kept = np.isfinite(known[0])
+        u[:, kept], guess[:, kept] = known[0][kept], known[1][kept]
     return best_of_run(problem, problem.run_coordinates(u, guess), keep)
 
 
@@ -416,12 +421,15 @@ def polish_structure(
     rng: np.random.Generator,
     ln_activity: Array,
     hints: Sequence[tuple[Array, Array]] = (),
+    known: tuple[Array, Array] | None = None,
     samples: int = 96,
     starts: int = 12,
+    iterations: int = 60,
 ) -> Polished:
     """Polish a structure from hints (coordinates and doses), samples and their neighbours.
 
-    ``ln_activity`` (H, nc) are known liquors to draw starts from, the anchors' for instance.
+    ``ln_activity`` (H, nc) are known liquors to draw starts from, the anchors' for instance;
+    ``known`` coordinates and doses to keep in the samples (see `sampled_starts`).
     """
     problem = TrainProblem(model, structure)
     if problem.size == 0:
@@ -431,7 +439,7 @@ def polish_structure(
     for u, dose in hints:
         u_rows.append(np.atleast_2d(u))
         dose_rows.append(np.atleast_2d(dose))
-    u_found, dose_found = sampled_starts(problem, rng, samples, starts - len(hints), ln_activity)
+    u_found, dose_found = sampled_starts(problem, rng, samples, starts - len(hints), ln_activity, known)
     u_rows.append(u_found)
     dose_rows.append(dose_found)
     u = np.concatenate(u_rows)
@@ -442,4 +450,4 @@ def polish_structure(
     while u.shape[0] < starts:
         u = np.concatenate([u, u[:1] + rng.normal(0.0, 0.03, (1, problem.size))])
         doses = np.concatenate([doses, doses[:1]])
-    return polish(problem, u, doses)
+    return polish(problem, u, doses, iterations=iterations)
