@@ -58,7 +58,7 @@ def test_engine_and_conic_solver_find_the_same_optimum():
 
 def test_a_trace_among_majors_is_balanced_to_its_own_size():
     result = dosewright.equilibrate(
-        {"Na+": 1.0, "Cl-": 1.0, "Cu+2": 1e-12, "SO4-2": 1e-12, "NH4+": 0.1, "CO3-2": 0.05},
+        {"Na+": 0.3, "Cl-": 0.3, "Cu+2": 1e-12, "SO4-2": 1e-12, "NH4+": 0.05, "CO3-2": 0.02},
     )
     dissolved = result.dissolved["Cu+2"] + result.solids["Cu(OH)2(s)"]
     assert dissolved == pytest.approx(1e-12, rel=1e-9)

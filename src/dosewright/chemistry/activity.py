@@ -19,6 +19,8 @@ LN10 = math.log(10.0)
 WATER_KG_PER_MOL = 0.01801528  # molar mass of H2O, IUPAC abridged atomic weights
 
 DAVIES_RANGE_MOL_PER_KG = 0.5  # usual upper ionic strength of the Davies equation (Davies 1962)
+#: ln(water activity) = -0.017 sum of molalities (Garrels and Christ 1965; memory)
+WATER_ACTIVITY_PER_MOLALITY = 0.017
 NEUTRAL_GAS_LOG10_PER_STRENGTH = 0.1  # salting-out of dissolved gases, Stumm and Morgan 1996
 
 
@@ -58,7 +60,7 @@ def _ideal(_temperature_C: float) -> NDArray[np.float64]:
 
 def _davies(temperature_C: float) -> NDArray[np.float64]:
     slope = debye_hueckel_slope(temperature_C) * LN10
-    return np.array([slope, 0.3, WATER_KG_PER_MOL])
+    return np.array([slope, 0.3, WATER_ACTIVITY_PER_MOLALITY])
 
 
 @dataclass(frozen=True)

@@ -27,6 +27,7 @@ from dosewright.search.polish import (
     Step,
     Structure,
     TrainProblem,
+    ahead,
     polish_structure,
 )
 from dosewright.trial import decisions_of, evaluate_on
@@ -88,6 +89,14 @@ class _Search:
             self.say(f"{train_text(self.model, structure)}: {verdict(result)}")
         return self.done[structure]
 
+    def is_close(self, result: Polished, centre: Polished) -> bool:
+        """Whether a quickly polished train could beat ``centre`` once polished in earnest."""
+        if not result.feasible or not centre.feasible:
+            return result.feasible or result.excess < 1.5 * centre.excess
+        flow = self.model.flowsheet.feed.flow_m3_per_h
+        scale = max(abs(centre.cost_USD_per_h), 0.05 * flow)
+        return result.cost_USD_per_h < centre.cost_USD_per_h + 0.04 * scale
+
     def trimmed(self, result: Polished) -> Polished:
         """Strike out stages that came out of the polish with nothing to do."""
         flow = self.model.flowsheet.feed.flow_m3_per_h
@@ -131,15 +140,6 @@ def known_of(
         u.append(result.coordinates[columns[source]] if same else np.nan)
         dose.append(result.dose_kg_per_h[source, step.reagent] if same else np.nan)
     return np.array(u), np.array(dose)
-
-
-def ahead(a: Polished, b: Polished, margin: float = 1e-9) -> bool:
-    """Whether ``a`` beats ``b``: feasible first, then cost, or what is missed."""
-    if a.feasible != b.feasible:
-        return a.feasible
-    if a.feasible:
-        return a.cost_USD_per_h < b.cost_USD_per_h - margin * abs(b.cost_USD_per_h)
-    return a.excess < b.excess * (1.0 - margin)
 
 
 def verdict(result: Polished) -> str:
@@ -208,7 +208,8 @@ def optimise(
         hints=[(best.coordinates, _lead_doses(search, best))],
         samples=64,
         starts=12,
-        iterations=150,
+        iterations=120,
+        shakes=6,
     )
     return _design(search, _agreement(search))
 
@@ -236,7 +237,7 @@ def _propose(search: _Search, time_limit_s: float) -> list[Polished]:
             search.proposals += 1
             before = search.best
             hints = _hint(search.model, anchors, found)
-            result = search.polish(found.structure, hints=hints, samples=32, starts=8)
+            result = search.polish(found.structure, hints=hints, samples=32, starts=8, shakes=1)
             if search.best is not before:
                 search.lattice_value = found.value_USD_per_h
             result = search.trimmed(result)
@@ -317,6 +318,14 @@ def _descend(search: _Search, seeds: list[Polished]) -> None:
                 result = search.trimmed(
                     search.polish(structure, **_quick(known_of(centre, structure, origin)))
                 )
+                if search.is_close(result, centre):
+                    result = search.polish(
+                        result.structure,
+                        hints=[(result.coordinates, _lead_doses(search, result))],
+                        samples=24,
+                        starts=6,
+                        shakes=1,
+                    )
                 if ahead(result, centre, WORTH_MOVING):
                     centre, moved = result, True
                     break
