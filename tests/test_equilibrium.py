@@ -2,16 +2,16 @@
 
 import numpy as np
 import pytest
-from conic_peer import ConicPeer
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from liquors import random_totals
 
 import dosewright
+from conic_peer import ConicPeer
 from dosewright.chemistry.activity import activity_model
 from dosewright.chemistry.system import system_of
 from dosewright.equilibrium import certify, solve
 from dosewright.errors import DosewrightError
+from liquors import random_totals
 
 ALL = tuple(dosewright.catalogue().components)
 
@@ -45,7 +45,7 @@ def test_engine_and_conic_solver_find_the_same_optimum():
     peer = ConicPeer(system, enabled)
     compared = 0
     for row in range(len(totals)):
-        status, x, _, keep_c, _, objective = peer.solve(totals[row])
+        status, _, _, keep_c, _, objective = peer.solve(totals[row])
         if status != "Solved":
             continue  # the peer itself gave up: nothing to compare with
         ours = states.molality[row].sum() - totals[row, keep_c] @ states.ln_activity[row, keep_c]
@@ -112,10 +112,9 @@ def test_bad_requests_are_refused_by_name(totals, options, word):
 amounts = st.floats(min_value=-6.0, max_value=-0.5).map(lambda e: 10.0**e)
 liquors = st.fixed_dictionaries(
     {},
-    optional={
-        name: amounts
-        for name in ("Ca+2", "Mg+2", "Fe+3", "Al+3", "Cu+2", "Zn+2", "NH4+", "SO4-2", "CO3-2")
-    },
+    optional=dict.fromkeys(
+        ("Ca+2", "Mg+2", "Fe+3", "Al+3", "Cu+2", "Zn+2", "NH4+", "SO4-2", "CO3-2"), amounts
+    ),
 )
 
 

@@ -21,7 +21,6 @@ from importlib import metadata
 from pathlib import Path
 from typing import Any
 
-from dosewright import __version__
 from dosewright.chemistry.catalogue import catalogue
 from dosewright.errors import Fault, InputError
 from dosewright.trial import Trial
@@ -167,7 +166,7 @@ def to_json(value: Any) -> str:
 
 def versions() -> dict[str, str]:
     """Versions of what computed a design."""
-    found = {"dosewright": __version__, "python": platform.python_version()}
+    found = {"dosewright": metadata.version("dosewright"), "python": platform.python_version()}
     for name in ("numpy", "scipy", "numba", "pyomo", "highspy"):
         try:
             found[name] = metadata.version(name)

@@ -200,8 +200,9 @@ def find_label(name: str) -> Label | None:
         if name in {component.name, component.assay_label} and name:
             return Label(name, {component.name: 1.0}, component.molar_mass_g_per_mol)
     of_element = {
-        c.name: 1.0 for c in data.values() if c.assay_label.split("(")[0] == name and "(" in (
-            c.assay_label)
+        c.name: 1.0
+        for c in data.values()
+        if c.assay_label.split("(")[0] == name and "(" in (c.assay_label)
     }
     if of_element:
         return Label(name, of_element, molar_mass_g_per_mol(name))
@@ -291,7 +292,11 @@ def _number(name: str) -> Reader:
 
     def read(r: _Reading, where: str, value: Any) -> float | None:
         if isinstance(value, bool) or not isinstance(value, int | float):
-            r.fault(where, f"is {_kind(value)}, not a number", f"write for example {where} = {low + 4:g}")
+            r.fault(
+                where,
+                f"is {_kind(value)}, not a number",
+                f"write for example {where} = {low + 4:g}",
+            )
             return None
         if not low <= float(value) <= high:
             r.fault(where, f"{value} is outside {low:g} to {high:g}", "correct it")
@@ -325,7 +330,9 @@ def _choice(*options: str) -> Reader:
 
 def _stages(r: _Reading, where: str, value: Any) -> int:
     if isinstance(value, bool) or not isinstance(value, int) or not 1 <= value <= MAX_STAGES:
-        r.fault(where, f"{value!r} is no number of stages", f"write a whole number, 1 to {MAX_STAGES}")
+        r.fault(
+            where, f"{value!r} is no number of stages", f"write a whole number, 1 to {MAX_STAGES}"
+        )
         return 1
     return value
 
@@ -446,7 +453,9 @@ def _basis_mass(basis: str, label: Label) -> float:
     if basis == "CaCO3":
         return molar_mass_g_per_mol("CaCO3")
     other = elements_of(basis)
-    shared = [e for e in other if e in own and e not in {"H", "O"}] or [e for e in other if e in own]
+    shared = [e for e in other if e in own and e not in {"H", "O"}] or [
+        e for e in other if e in own
+    ]
     if not shared:
         raise ValueError(f"'as {basis}' shares no element with {label.label}")
     key = shared[0]
@@ -454,7 +463,7 @@ def _basis_mass(basis: str, label: Label) -> float:
 
 
 def _families(r: _Reading, where: str, value: Any) -> dict[str, float]:
-    out = _by_name("fraction", labels=False)(r, where, value)
+    out: dict[str, float] = _by_name("fraction", labels=False)(r, where, value)
     for name in [n for n in out if n not in FAMILIES]:
         close = difflib.get_close_matches(name, FAMILIES, 1)
         hint = f"did you mean {close[0]}?" if close else f"known: {', '.join(FAMILIES)}"
@@ -559,6 +568,8 @@ _KEYS: dict[str, dict[str, _Key]] = {
     },
 }
 
+_NO_EFFLUENT: dict[str, Any] = {"pH": (None, None), "dissolved": (), "total": ()}
+
 #: water, mass fraction of wet cake, used where a file states none (common practice, no source)
 DEFAULT_MOISTURE = {
     "hydroxide": 0.60, "basic_salt": 0.55, "carbonate": 0.40, "sulfide": 0.45, "sulfate": 0.40,
@@ -589,7 +600,9 @@ def read_toml(path: str | Path) -> dict[str, Any]:
         text = file.read_bytes().decode("utf-8")
         document = tomllib.loads(text)
     except FileNotFoundError as error:
-        raise InputError(str(path), [Fault("", "there is no such file", "check the path")]) from error
+        raise InputError(
+            str(path), [Fault("", "there is no such file", "check the path")]
+        ) from error
     except IsADirectoryError as error:
         raise InputError(str(path), [Fault("", "is a folder", "name a file in it")]) from error
     except OSError as error:
@@ -630,7 +643,7 @@ def from_document(document: Mapping[str, Any], source_name: str) -> Flowsheet:
     effluent = (
         r.table("effluent", top["effluent"], _KEYS["effluent"])
         if top["effluent"] is not None
-        else {"pH": (None, None), "dissolved": (), "total": ()}
+        else dict(_NO_EFFLUENT)
     )
     solids = r.table("solids", top["solids"], _KEYS["solids"])
     disposal = prices["disposal"] or {}
@@ -643,7 +656,8 @@ def from_document(document: Mapping[str, Any], source_name: str) -> Flowsheet:
         _check_limits(r, feed, reagents, oxidants, effluent, products)
     decisions = _read_train(r, top["train"])
     r.finish()
-    assert feed is not None and plant is not None  # without faults both were read
+    assert feed is not None  # without faults both were read
+    assert plant is not None
     flowsheet = Flowsheet(
         title=top["title"],
         notice=top["notice"],
@@ -654,7 +668,9 @@ def from_document(document: Mapping[str, Any], source_name: str) -> Flowsheet:
         oxidants=oxidants,
         products=products,
         waste_class=waste_class,
-        effluent=Effluent(*effluent["pH"], effluent["dissolved"], effluent["total"]),
+        effluent=Effluent(
+            effluent["pH"][0], effluent["pH"][1], effluent["dissolved"], effluent["total"]
+        ),
         solids_allow=solids["allow"],
         solids_forbid=solids["forbid"],
         decisions=decisions,
@@ -833,14 +849,22 @@ def _read_products(
                 r.fault(f"{where}.payable.{metal}", "is not among the product's metals",
                         "add it to metals, or take it out")  # fmt: skip
             elif metal not in metal_prices:
-                r.fault(f"prices.metal.{metal}", "is missing", f"{t['name']} is paid for it: add it")
+                r.fault(
+                    f"prices.metal.{metal}", "is missing", f"{t['name']} is paid for it: add it"
+                )
         if len(r.faults) > before:
             continue
         out.append(
             Product(
-                t["name"], t["metals"], t["min_recovery"], t["min_grade"], t["max_impurity"],
-                t["min_family"], payable or {}, t["optional"],
-            )  # fmt: skip
+                t["name"],
+                t["metals"],
+                t["min_recovery"],
+                t["min_grade"],
+                t["max_impurity"],
+                t["min_family"],
+                payable or {},
+                t["optional"],
+            )
         )
     return tuple(out)
 
@@ -853,7 +877,7 @@ def _check_limits(
     effluent: Mapping[str, Any],
     products: Iterable[Product],
 ) -> None:
-    """A limit on something that can never be there is a slip of the pen."""
+    """Refuse limits on what can never be there: a slip of the pen."""
     there = set(feed.assay_mol_per_L) | {feed.closing_component}
     for reagent in reagents.values():
         there |= set(reagent.components)
@@ -878,7 +902,6 @@ def _read_train(r: _Reading, value: Any) -> dict[str, Any] | None:
         return None
     if not value:
         return None
-    flow = None
     stages = []
     for number, entry in enumerate(value, start=1):
         where = f"train[{number}]"
@@ -892,7 +915,6 @@ def _read_train(r: _Reading, value: Any) -> dict[str, Any] | None:
             else:
                 doses[name] = dose
         stages.append({"reagents": doses, "oxidant": t["oxidant"], "cake": t["cake"]})
-    del flow
     return {"stages": stages}
 
 
@@ -947,11 +969,14 @@ def decompose(formula: str) -> tuple[dict[str, float], float] | str:
         out[ion] = amount
         for element, count in elements_of(ion).items():
             left[element] = left.get(element, 0.0) - amount * count
-    by_element = {}
+    by_element: dict[str, list[str]] = {}
     for name, record in components.items():
         elements = [e for e in record.elements if e not in {"H", "O"}]
-        if name not in out and len(elements) == 1 and not {"O"} & set(record.elements) and (
-            name not in {"NH4+"}
+        if (
+            name not in out
+            and len(elements) == 1
+            and not {"O"} & set(record.elements)
+            and (name not in {"NH4+"})
         ):
             by_element.setdefault(elements[0], []).append(name)
     choices: list[tuple[str, float]] = []
@@ -1026,8 +1051,10 @@ def check_decisions(flowsheet: Flowsheet, decisions: Mapping[str, Any]) -> None:
                 r.fault(path, "is no dose", 'give {"dose_kg_per_m3": 1.2} or {"pH": 6.0}')
                 continue
             value = next(iter(dose.values()))
-            if isinstance(value, bool) or not isinstance(value, int | float | np.floating) or not (
-                math.isfinite(value)
+            if (
+                isinstance(value, bool)
+                or not isinstance(value, int | float | np.floating)
+                or not (math.isfinite(value))
             ):
                 r.fault(path, f"{value!r} is no number", "give a number")
             elif "pH" in dose:

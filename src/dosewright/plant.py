@@ -155,7 +155,13 @@ class Orders:
         shape = dose_kg_per_h.shape[:2]
         none = np.full(shape, np.nan)
         return Orders(
-            dose_kg_per_h, oxidant, np.zeros(shape, dtype=np.int64), none, none, np.zeros(shape), none
+            dose_kg_per_h,
+            oxidant,
+            np.zeros(shape, dtype=np.int64),
+            none,
+            none,
+            np.zeros(shape),
+            none,
         )
 
     def to_pH(self, lead: NDArray[np.int64], target: Array) -> Orders:
@@ -166,9 +172,7 @@ class Orders:
         self, lead: NDArray[np.int64], value: Array, guess: Array, slope: Array
     ) -> Orders:
         """Orders whose lead reagents meet a value of `lead_coordinate`."""
-        return replace(
-            self, lead=lead, coordinate=value, guess_kg_per_h=guess, guess_slope=slope
-        )
+        return replace(self, lead=lead, coordinate=value, guess_kg_per_h=guess, guess_slope=slope)
 
 
 @dataclass(frozen=True, eq=False)
@@ -275,8 +279,9 @@ class PlantModel:
     def coordinate_eq_per_kg(self) -> float:
         """Dose that counts as one in `lead_coordinate`: four times what the feed can consume."""
         charge = self.system.component_charge
-        loose = [self.system.components.index(c) for c in ("Na+", "K+") if c in (
-            self.system.components)]
+        loose = [
+            self.system.components.index(c) for c in ("Na+", "K+") if c in (self.system.components)
+        ]
         weight = np.maximum(charge, 0.0)
         weight[loose] = 0.0
         feed_kg = float(self.feed.water[0]) * WATER_KG_PER_MOL
@@ -494,17 +499,18 @@ def _fill(model: PlantModel, inflow: Stream, stage: int, orders: Orders) -> _Tan
                 # 1/2 H2O2 + H+ + e- = H2O, and the water of the solution; the peroxide that
                 # misses its mark decomposes to water and oxygen
                 wasted = used * (1.0 / agent.utilisation - 1.0)
-                water = water + converted + wasted + kg[:, o] * (1.0 - agent.strength) / (
-                    WATER_KG_PER_MOL
+                water = (
+                    water
+                    + converted
+                    + wasted
+                    + kg[:, o] * (1.0 - agent.strength) / (WATER_KG_PER_MOL)
                 )
     rest = replace(inflow, solids=np.zeros_like(inflow.solids))
     dose = orders.dose_kg_per_h[:, stage, :].copy()
     return _Tank(totals, water, rest, dose, oxidised, kg, m3)
 
 
-def _react(
-    model: PlantModel, totals: Array, water: Array, start: States | None = None
-) -> States:
+def _react(model: PlantModel, totals: Array, water: Array, start: States | None = None) -> States:
     return solve(
         model.system,
         model.activity,
@@ -592,7 +598,8 @@ def lead_coordinate(
     potential = terms.sum(axis=1) / LN10 / equivalents
     eq = dose_kg_per_h * model.reagent_rates[lead, 0] * equivalents
     feed_kg = float(model.feed.water[0]) * WATER_KG_PER_MOL
-    return potential / COORDINATE_DECADES + eq / (feed_kg * model.coordinate_eq_per_kg)
+    scale = feed_kg * model.coordinate_eq_per_kg
+    return np.asarray(potential / COORDINATE_DECADES + eq / scale)
 
 
 def _meet_coordinate(
@@ -693,9 +700,7 @@ def _set_doses(model: PlantModel, tank: _Tank, stage: int, orders: Orders) -> tu
     return dose, missed
 
 
-def _settle(
-    model: PlantModel, pulp: Stream, solvent: Array
-) -> tuple[Stream, Stream, Array, Mask]:
+def _settle(model: PlantModel, pulp: Stream, solvent: Array) -> tuple[Stream, Stream, Array, Mask]:
     """Split pulp into cake and overflow.
 
     The cake holds its moisture in liquor; the overflow carries fines of the pulp's own solids up to
@@ -804,9 +809,7 @@ def _stage(
     return run, solved, missed, dried
 
 
-def simulate(
-    model: PlantModel, orders: Orders, starts: tuple[States, ...] | None = None
-) -> Run:
+def simulate(model: PlantModel, orders: Orders, starts: tuple[States, ...] | None = None) -> Run:
     """Run ``N`` trials through the train; failed rows are marked in ``ok``.
 
     ``starts`` may hold states of similar vessels, stage by stage (see `Run.starts`).

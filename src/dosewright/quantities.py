@@ -48,7 +48,7 @@ class QuantityError(ValueError):
 def _registry() -> Any:
     import pint  # noqa: PLC0415  (slow to import)
 
-    registry = pint.UnitRegistry(autoconvert_offset_to_baseunit=True, cache_folder=None)
+    registry: Any = pint.UnitRegistry(autoconvert_offset_to_baseunit=True, cache_folder=None)
     registry.define("USD = [money] = $_USD")
     registry.define("t = 1000 kilogram = tonne = metric_tonne")
     registry.define("short_ton = 907.18474 kilogram")
@@ -60,7 +60,9 @@ def _registry() -> Any:
     return registry
 
 
-_LEADING = re.compile(r"^\s*([+-]?(?:\d[\d,_ ]*\d|\d)(?:\.\d*)?(?:[eE][+-]?\d+)?|[+-]?\.\d+)\s*(.*)$")
+_LEADING = re.compile(
+    r"^\s*([+-]?(?:\d[\d,_ ]*\d|\d)(?:\.\d*)?(?:[eE][+-]?\d+)?|[+-]?\.\d+)\s*(.*)$"
+)
 _POWER = re.compile(r"(?<=[a-zA-Z])([23])\b")
 _YEAR = re.compile(r"\b(y|year)\b")
 

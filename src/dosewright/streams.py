@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -80,9 +80,7 @@ def _row(
     solids_kg = stream.solids[0] * model.solid_g_per_mol / 1000.0
     left = float((stream.unreacted @ model.reagent_g_per_mol)[0]) / 1000.0
     everything = (
-        totals
-        + stream.solids[0] @ system.A[:ks]
-        + (stream.unreacted @ model.reagent_components)[0]
+        totals + stream.solids[0] @ system.A[:ks] + (stream.unreacted @ model.reagent_components)[0]
     )
     mg_per_L = grams * 1000.0 / litres if litres > 0.0 else np.zeros_like(grams)
     return StreamRow(
@@ -113,9 +111,14 @@ def stream_table(run: Run, destinations: Sequence[str]) -> list[StreamRow]:
         if start == "feed":
             rows.append(
                 _row(
-                    model, model.feed, feed_solvent, number=number, name="feed", kind=kind,
+                    model,
+                    model.feed,
+                    feed_solvent,
+                    number=number,
+                    name="feed",
+                    kind=kind,
                     pH=float(states.pH[0]),
-                )  # fmt: skip
+                )
             )
             continue
         this = run.stages[stage]
@@ -134,10 +137,43 @@ def stream_table(run: Run, destinations: Sequence[str]) -> list[StreamRow]:
     return rows
 
 
+@dataclass(frozen=True, eq=False)
+class CakeFigures:
+    """Masses of one cake, (N,) kg/h unless said otherwise."""
+
+    element_kg: Mapping[str, Array]
+    family_kg: Mapping[str, Array]
+    dry_kg: Array
+    wet_kg: Array
+
+
+def label_kg_per_h(model: PlantModel, label: str, component_mol: Array) -> Array:
+    """Kilograms per hour of what ``label`` names, from mol/h of components (N, nc)."""
+    spec = model.flowsheet.label(label)
+    weights = np.array([spec.components.get(c, 0.0) for c in model.system.components])
+    return np.asarray(component_mol @ weights) * spec.g_per_mol / 1000.0
+
+
+def cake_figures(model: PlantModel, cake: Stream, solvent: Array) -> CakeFigures:
+    """Weigh a cake: its solids, its leftovers and the salts its moisture leaves on drying."""
+    ks = model.system.solids_count
+    solids_kg = cake.solids @ model.solid_g_per_mol / 1000.0
+    leftover_kg = (cake.unreacted + cake.idle) @ model.reagent_g_per_mol / 1000.0
+    salts_kg = cake.totals @ model.component_g_per_mol / 1000.0
+    dry = solids_kg + leftover_kg + salts_kg + cake.inert
+    components = (
+        cake.solids @ model.system.A[:ks] + cake.totals + cake.unreacted @ model.reagent_components
+    )
+    labels = {m for p in model.flowsheet.products for m in (*p.metals, *p.max_impurity)}
+    kg = {label: label_kg_per_h(model, label, components) for label in labels}
+    families = {f for p in model.flowsheet.products for f in p.min_family}
+    each = cake.solids * model.solid_g_per_mol / 1000.0
+    of_family = {f: each @ model.in_family(f) for f in families}
+    return CakeFigures(kg, of_family, dry, dry + solvent)
+
+
 def stage_reports(run: Run, destinations: Sequence[str]) -> list[StageReport]:
     """One report per stage."""
-    from dosewright.trial import cake_figures  # noqa: PLC0415  (trial builds on this module)
-
     model = run.model
     flowsheet = model.flowsheet
     system = model.system
@@ -266,9 +302,7 @@ def certificate_of(run: Run, stage: int) -> dict[str, float]:
     given = (
         this.pulp.totals + this.pulp.solids @ system.A[:ks] + this.vented_mol_per_h @ system.A[ks:]
     ) / this.solvent_kg_per_h[:, None]
-    figures = certify(
-        this.states, given, run.model.enabled, ln_pressure=run.model.ln_pressure
-    )
+    figures = certify(this.states, given, run.model.enabled, ln_pressure=run.model.ln_pressure)
     return {
         "balance_residual": float(figures.balance_residual[0]),
         "mass_action_residual_ln": float(figures.mass_action_residual_ln[0]),

@@ -17,8 +17,17 @@ from dosewright.cautions import Caution, cautions_of
 from dosewright.chemistry.activity import WATER_KG_PER_MOL
 from dosewright.errors import Fault, InputError, NotConverged
 from dosewright.flowsheet import Flowsheet, Product, check_decisions
-from dosewright.plant import ChargeClosure, Orders, PlantModel, Run, Stream, simulate
-from dosewright.streams import StageReport, StreamRow, balance_of, stage_reports, stream_table
+from dosewright.plant import ChargeClosure, Orders, PlantModel, Run, simulate
+from dosewright.streams import (
+    CakeFigures,
+    StageReport,
+    StreamRow,
+    balance_of,
+    cake_figures,
+    label_kg_per_h,
+    stage_reports,
+    stream_table,
+)
 
 Array = NDArray[np.float64]
 
@@ -68,49 +77,12 @@ class Account:
     @property
     def cost_USD_per_h(self) -> Array:
         """(N,) the objective: reagents, water, oxidants and disposal less credits."""
-        return np.sum([line.USD_per_h for line in self.costs], axis=0)
+        return np.asarray(np.sum([line.USD_per_h for line in self.costs], axis=0))
 
     @property
     def excess(self) -> Array:
         """(N, limits) scaled excess of every limit."""
         return np.stack([limit.excess for limit in self.limits], axis=1)
-
-
-@dataclass(frozen=True, eq=False)
-class CakeFigures:
-    """Masses of one cake, (N,) kg/h unless said otherwise."""
-
-    element_kg: Mapping[str, Array]
-    family_kg: Mapping[str, Array]
-    dry_kg: Array
-    wet_kg: Array
-
-
-def label_kg_per_h(model: PlantModel, label: str, component_mol: Array) -> Array:
-    """Kilograms per hour of what ``label`` names, from mol/h of components (N, nc)."""
-    spec = model.flowsheet.label(label)
-    weights = np.array([spec.components.get(c, 0.0) for c in model.system.components])
-    return np.asarray(component_mol @ weights) * spec.g_per_mol / 1000.0
-
-
-def cake_figures(model: PlantModel, cake: Stream, solvent: Array) -> CakeFigures:
-    """Weigh a cake: its solids, its leftovers and the salts its moisture leaves on drying."""
-    ks = model.system.solids_count
-    solids_kg = cake.solids @ model.solid_g_per_mol / 1000.0
-    leftover_kg = (cake.unreacted + cake.idle) @ model.reagent_g_per_mol / 1000.0
-    salts_kg = cake.totals @ model.component_g_per_mol / 1000.0
-    dry = solids_kg + leftover_kg + salts_kg + cake.inert
-    components = (
-        cake.solids @ model.system.A[:ks]
-        + cake.totals
-        + cake.unreacted @ model.reagent_components
-    )
-    labels = {m for p in model.flowsheet.products for m in (*p.metals, *p.max_impurity)}
-    kg = {label: label_kg_per_h(model, label, components) for label in labels}
-    families = {f for p in model.flowsheet.products for f in p.min_family}
-    each = cake.solids * model.solid_g_per_mol / 1000.0
-    of_family = {f: each @ model.in_family(f) for f in families}
-    return CakeFigures(kg, of_family, dry, dry + solvent)
 
 
 def _effluent_limits(run: Run) -> list[LimitBatch]:
@@ -140,9 +112,14 @@ def _effluent_limits(run: Run) -> list[LimitBatch]:
             mg_per_L = np.asarray(amounts @ weights) * row.g_per_mol * 1000.0 / litres
             limits.append(
                 LimitBatch(
-                    f"{row.label}, {kind}", "effluent", "max", mg_per_L, row.max_mg_per_L, "mg/L",
+                    f"{row.label}, {kind}",
+                    "effluent",
+                    "max",
+                    mg_per_L,
                     row.max_mg_per_L,
-                )  # fmt: skip
+                    "mg/L",
+                    row.max_mg_per_L,
+                )
             )
     return limits
 
@@ -171,25 +148,39 @@ def _reagent_limits(run: Run, orders_used: NDArray[np.bool_]) -> list[LimitBatch
             if reagent.max_pH is not None:
                 limits.append(
                     LimitBatch(
-                        f"pH with {reagent.name}", where, "max", stage.states.pH, reagent.max_pH,
-                        "", 1.0,
-                    )  # fmt: skip
+                        f"pH with {reagent.name}",
+                        where,
+                        "max",
+                        stage.states.pH,
+                        reagent.max_pH,
+                        "",
+                        1.0,
+                    )
                 )
             if reagent.max_dose_kg_per_m3 is not None:
                 limits.append(
                     LimitBatch(
-                        f"dose of {reagent.name}", where, "max",
-                        stage.dose_kg_per_h[:, i] / flow, reagent.max_dose_kg_per_m3, "kg/m3",
+                        f"dose of {reagent.name}",
+                        where,
+                        "max",
+                        stage.dose_kg_per_h[:, i] / flow,
                         reagent.max_dose_kg_per_m3,
-                    )  # fmt: skip
+                        "kg/m3",
+                        reagent.max_dose_kg_per_m3,
+                    )
                 )
         for o, agent in enumerate(flowsheet.oxidants.values()):
             if orders_used[k, len(reagents) + o] and agent.min_pH is not None:
                 limits.append(
                     LimitBatch(
-                        f"pH with {agent.name}", where, "min", stage.states.pH, agent.min_pH,
-                        "", 1.0,
-                    )  # fmt: skip
+                        f"pH with {agent.name}",
+                        where,
+                        "min",
+                        stage.states.pH,
+                        agent.min_pH,
+                        "",
+                        1.0,
+                    )
                 )
     return limits
 
@@ -217,33 +208,69 @@ def _product_limits(
     if product.min_recovery is not None:
         limits.append(
             LimitBatch(
-                f"recovery of {metals}", where, "min", 100.0 * metal / max(fed, 1e-300),
-                100.0 * product.min_recovery, "%", 100.0 * product.min_recovery,
-            )  # fmt: skip
+                f"recovery of {metals}",
+                where,
+                "min",
+                100.0 * metal / max(fed, 1e-300),
+                100.0 * product.min_recovery,
+                "%",
+                100.0 * product.min_recovery,
+            )
         )
     if product.min_grade is not None:
         limits.append(
             LimitBatch(
-                f"grade, {metals} dry", where, "min", 100.0 * metal / safe_dry,
-                100.0 * product.min_grade, "%", 100.0 * product.min_grade,
-            )  # fmt: skip
+                f"grade, {metals} dry",
+                where,
+                "min",
+                100.0 * metal / safe_dry,
+                100.0 * product.min_grade,
+                "%",
+                100.0 * product.min_grade,
+            )
         )
     for label, ceiling in product.max_impurity.items():
         limits.append(
             LimitBatch(
-                f"{label} dry", where, "max", 100.0 * kg[label] / safe_dry, 100.0 * ceiling, "%",
+                f"{label} dry",
+                where,
+                "max",
+                100.0 * kg[label] / safe_dry,
                 100.0 * ceiling,
-            )  # fmt: skip
+                "%",
+                100.0 * ceiling,
+            )
         )
     for family, least in product.min_family.items():
         share = _sum([c.family_kg[family] for c in cakes], count) / safe_dry
         limits.append(
             LimitBatch(
-                f"{family} solids dry", where, "min", 100.0 * share, 100.0 * least, "%",
+                f"{family} solids dry",
+                where,
+                "min",
+                100.0 * share,
                 100.0 * least,
-            )  # fmt: skip
+                "%",
+                100.0 * least,
+            )
         )
     return limits, {m: kg[m] for m in product.metals}
+
+
+def _in_use(run: Run) -> NDArray[np.bool_]:
+    """Reagents and oxidants with any dose in the batch, (K, R + O)."""
+    rows = [
+        np.concatenate(
+            [
+                (s.dose_kg_per_h > 0.0).any(axis=0),
+                ((s.oxidant_kg_per_h + s.oxidant_m3_per_h) > 0.0).any(axis=0),
+            ]
+        )
+        for s in run.stages
+    ]
+    flowsheet = run.model.flowsheet
+    columns = len(flowsheet.reagents) + len(flowsheet.oxidants)
+    return np.array(rows, dtype=np.bool_).reshape(len(rows), columns)
 
 
 def account(
@@ -259,16 +286,7 @@ def account(
     reagents = list(flowsheet.reagents.values())
     oxidants = list(flowsheet.oxidants.values())
     if used is None:
-        used = np.array(
-            [
-                [
-                    *(s.dose_kg_per_h > 0.0).any(axis=0),
-                    *((s.oxidant_kg_per_h + s.oxidant_m3_per_h) > 0.0).any(axis=0),
-                ]
-                for s in run.stages
-            ],
-            dtype=bool,
-        ).reshape(len(run.stages), len(reagents) + len(oxidants))
+        used = _in_use(run)
     costs: list[CostBatch] = []
 
     def cost(group: str, item: str, quantity: Array, unit: str, price: float, per: str) -> None:
@@ -318,9 +336,13 @@ def account(
                 price = prices.metal_USD_per_t[metal]
                 costs.append(
                     CostBatch(
-                        "credit", f"{metal} in {product.name}, {100 * share:g} % payable",
-                        kg / 1000.0, "t/h", f"{price:,.6g} USD/t", -kg / 1000.0 * price * share,
-                    )  # fmt: skip
+                        "credit",
+                        f"{metal} in {product.name}, {100 * share:g} % payable",
+                        kg / 1000.0,
+                        "t/h",
+                        f"{price:,.6g} USD/t",
+                        -kg / 1000.0 * price * share,
+                    )
                 )
     if not costs:
         costs.append(CostBatch("none", "nothing is done", np.zeros(count), "", "", np.zeros(count)))
@@ -492,9 +514,13 @@ def report_run(run: Run, destinations: Sequence[str]) -> Trial:
     limits = [_limit(row) for row in books.limits]
     costs = [
         CostLine(
-            c.group, c.item, float(c.quantity[0]), c.quantity_unit, c.price_text,
+            c.group,
+            c.item,
+            float(c.quantity[0]),
+            c.quantity_unit,
+            c.price_text,
             float(c.USD_per_h[0]),
-        )  # fmt: skip
+        )
         for c in books.costs
     ]
     stages = stage_reports(run, destinations)

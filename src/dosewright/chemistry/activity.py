@@ -51,7 +51,9 @@ def debye_hueckel_slope(temperature_C: float) -> float:
     """
     kelvin = temperature_C + 273.15
     density = water_density_kg_per_m3(temperature_C) / 1000.0
-    return 1.82483e6 * math.sqrt(density) / (dielectric_constant(temperature_C) * kelvin) ** 1.5
+    return (
+        1.82483e6 * math.sqrt(density) / math.pow(dielectric_constant(temperature_C) * kelvin, 1.5)
+    )
 
 
 def _ideal(_temperature_C: float) -> NDArray[np.float64]:

@@ -124,9 +124,9 @@ def _side(text: str) -> dict[str, float]:
     return terms
 
 
-def _reaction(text: str, name: str, components: Mapping[str, Component], *, forms: bool) -> (
-    tuple[dict[str, float], float]
-):
+def _reaction(
+    text: str, name: str, components: Mapping[str, Component], *, forms: bool
+) -> tuple[dict[str, float], float]:
     """Stoichiometry over components and H2O of one mole of ``name``.
 
     ``forms`` says whether the reaction makes ``name`` (species) or dissolves it (solids, gases).
@@ -156,9 +156,9 @@ def _number(text: str) -> float | None:
     return float(text) if text else None
 
 
-def _common(row: dict[str, str], components: Mapping[str, Component], *, forms: bool) -> (
-    dict[str, object]
-):
+def _common(
+    row: dict[str, str], components: Mapping[str, Component], *, forms: bool
+) -> dict[str, object]:
     stoichiometry, water = _reaction(row["reaction"], row["name"], components, forms=forms)
     return {
         "name": row["name"],
@@ -190,7 +190,7 @@ def catalogue() -> Catalogue:
     digest: list[dict[str, str]] = []
     table, number = "components.tsv", 0
     try:
-        for number, row in _rows(table):
+        for number, row in _rows(table):  # noqa: B007  (number goes into the error)
             digest.append(row)
             basis: dict[str, object] = {
                 "name": row["name"], "formula": row["formula"], "charge": int(row["charge"]),
@@ -201,11 +201,11 @@ def catalogue() -> Catalogue:
             components[row["name"]] = Component(assay_label=row["assay_label"], **basis)  # type: ignore[arg-type]
             species[row["name"]] = Species(**basis)  # type: ignore[arg-type]
         table = "species.tsv"
-        for number, row in _rows(table):
+        for number, row in _rows(table):  # noqa: B007  (number goes into the error)
             digest.append(row)
             species[row["name"]] = Species(**_common(row, components, forms=True))  # type: ignore[arg-type]
         table = "solids.tsv"
-        for number, row in _rows(table):
+        for number, row in _rows(table):  # noqa: B007  (number goes into the error)
             digest.append(row)
             if row["forms"] not in {"fast", "slow"}:
                 raise ValueError(f"forms '{row['forms']}'")
@@ -216,7 +216,7 @@ def catalogue() -> Catalogue:
                 density_g_per_cm3=float(row["density_g_per_cm3"]),
             )
         table = "gases.tsv"
-        for number, row in _rows(table):
+        for number, row in _rows(table):  # noqa: B007  (number goes into the error)
             digest.append(row)
             gases[row["name"]] = Gas(**_common(row, components, forms=False))  # type: ignore[arg-type]
     except (KeyError, ValueError) as error:

@@ -6,8 +6,8 @@ import re
 from functools import lru_cache
 from types import MappingProxyType
 
-#: g/mol; IUPAC abridged standard atomic weights (Prohaska and others 2022, Pure Appl. Chem. 94, 573;
-#: memory)
+#: g/mol; IUPAC abridged standard atomic weights (Prohaska and others 2022, Pure Appl. Chem.
+#: 94, 573; memory)
 ATOMIC_WEIGHT = MappingProxyType(
     {
         "H": 1.008, "Li": 6.94, "B": 10.81, "C": 12.011, "N": 14.007, "O": 15.999, "F": 18.998,

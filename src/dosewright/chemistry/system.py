@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dosewright.chemistry.activity import LN10
-from dosewright.chemistry.catalogue import Gas, Solid, catalogue
+from dosewright.chemistry.catalogue import Gas, Solid, Species, catalogue
 from dosewright.errors import DosewrightError
 
 Array = NDArray[np.float64]
@@ -110,10 +110,10 @@ def _build(components: tuple[str, ...], temperature_C: float) -> System:
     gases = [g for g in data.gases.values() if present.issuperset(g.components)]
     phases: list[Solid | Gas] = [*solids, *gases]
 
-    def matrix(rows: Sequence[object]) -> Array:
+    def matrix(rows: Sequence[Species | Solid | Gas]) -> Array:
         return np.array(
-            [[row.components.get(c, 0.0) for c in components] for row in rows],  # type: ignore[attr-defined]
-            dtype=float,
+            [[row.components.get(c, 0.0) for c in components] for row in rows],
+            dtype=np.float64,
         ).reshape(len(rows), len(components))
 
     dissolved_gases = {name.removesuffix("(g)") for name in data.gases}

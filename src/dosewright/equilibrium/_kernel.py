@@ -478,7 +478,20 @@ def _inner(x, T, lnK, ptr, idx, val, m, A, B, n, active, nc, nk, warm):
                 x[j] = -16.0
         for t in range(len(TAU_STEPS)):
             _homotopy(
-                x, T, lnK, ptr, idx, val, m, A, B, n0, TAU_STEPS[t], n, nc, nk,
+                x,
+                T,
+                lnK,
+                ptr,
+                idx,
+                val,
+                m,
+                A,
+                B,
+                n0,
+                TAU_STEPS[t],
+                n,
+                nc,
+                nk,
                 300 if t == 0 else 100,
             )
             xs = x.copy()
@@ -664,7 +677,19 @@ def solve(
             for j in range(nca):
                 Tk[j] = T[j] / kg
             worst = _inner(
-                x, Tk, lnKe, cptr, cidx, cval, m, CA, Be, n, active, nca, nka,
+                x,
+                Tk,
+                lnKe,
+                cptr,
+                cidx,
+                cval,
+                m,
+                CA,
+                Be,
+                n,
+                active,
+                nca,
+                nka,
                 is_warm or outer > 0,
             )
             if worst < 0.0:

@@ -216,7 +216,7 @@ def _basis_charge(system: System) -> Array:
     """Charge carried by one mole of each basis entry (a held gas carries none)."""
     # species charges are linear in the basis: solve from the free ions of the original basis
     solution, *_ = np.linalg.lstsq(system.nu, system.charge, rcond=None)
-    return solution
+    return np.asarray(solution, dtype=np.float64)
 
 
 def _certificate(arrays: CertificateArrays, row: int, system: System) -> Certificate:
@@ -315,9 +315,7 @@ def _solve_named(
             - finite[:, others] @ system.A[k, others]
             - raw.ln_water_activity * system.A_water[k]
         ) / system.A[k, j]
-    states = States(
-        system, x, raw.molality, raw.phase_mol_per_kg, raw.ln_gamma, raw.info
-    )
+    states = States(system, x, raw.molality, raw.phase_mol_per_kg, raw.ln_gamma, raw.info)
     for gas in gases:
         component = _GAS_COMPONENT[gas]
         k, j = system.phases.index(gas), system.components.index(component)
@@ -436,9 +434,7 @@ def equilibrate_batch(
     columns = {name: np.broadcast_to(a, (count,)) for name, a in arrays.items()}
     solved = _solve_named(columns, count, temperature_C, activity, solids, conditions)
     states, system = solved.states, solved.system
-    certificates = tuple(
-        _certificate(solved.certificates, row, system) for row in range(count)
-    )
+    certificates = tuple(_certificate(solved.certificates, row, system) for row in range(count))
     for row, certificate in enumerate(certificates):
         if not certificate.passed:
             raise NotConverged(f"equilibrium {row} fails its own certificate: {certificate}")

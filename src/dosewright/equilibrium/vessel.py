@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -81,12 +82,12 @@ class States:
     def pH(self) -> Array:
         """Negative decimal logarithm of the hydrogen-ion activity."""
         h = self.system.components.index("H+")
-        return -self.ln_activity[:, h] / np.log(10.0)
+        return np.asarray(-self.ln_activity[:, h] / np.log(10.0))
 
     @property
     def dissolved_mol_per_kg(self) -> Array:
         """(N, nc) each component in solution, all its species together, mol per kg of water."""
-        return self.molality @ self.system.nu
+        return np.asarray(self.molality @ self.system.nu)
 
     def ln_saturation(self) -> Array:
         """(N, nk) ln(Q/K) of every phase (gases against 1 atm), ``-inf`` where one cannot be."""
@@ -200,5 +201,5 @@ def solve(
     else:
         edges = np.linspace(0, count, 4 * workers + 1).astype(int)
         with ThreadPoolExecutor(workers) as pool:
-            list(pool.map(run, [slice(a, b) for a, b in zip(edges, edges[1:], strict=False)]))
+            list(pool.map(run, [slice(a, b) for a, b in pairwise(edges)]))
     return States(system, x, molality, phase, ln_gamma, info)

@@ -67,7 +67,9 @@ class _Search:
         """Random numbers that depend on the structure alone, not on what was tried before."""
         places = ["waste", *(p.name for p in self.model.flowsheet.products)]
         flat = [
-            n for s in structure for n in (s.reagent + 1, s.oxidant + 1, places.index(s.destination))
+            n
+            for s in structure
+            for n in (s.reagent + 1, s.oxidant + 1, places.index(s.destination))
         ]
         return np.random.default_rng([self.seed, *flat])
 
@@ -246,7 +248,9 @@ def _propose(search: _Search, time_limit_s: float) -> list[Polished]:
     return list(best.values())
 
 
-def _hint(model: PlantModel, anchors: Anchors, proposal: Proposal) -> list:
+def _hint(
+    model: PlantModel, anchors: Anchors, proposal: Proposal
+) -> list[tuple[np.ndarray, np.ndarray]]:
     """Coordinates and doses of a proposal, from its anchors' activities and its doses."""
     problem = TrainProblem(model, proposal.structure)
     if problem.size == 0:
@@ -279,6 +283,7 @@ def _neighbours(
                     new = (*structure[:k], Step(r, -1, d), *structure[k:])
                     yield new, (*same[:k], -1, *same[k:])
     for k, step in enumerate(structure):
+
         def put(new: Step, k: int = k) -> Structure:
             return (*structure[:k], new, *structure[k + 1 :])
 
@@ -304,7 +309,9 @@ def _descend(search: _Search, seeds: list[Polished]) -> None:
     if not seeds:
         first = (Step(0, -1, "waste"),)
         seeds = [search.polish(first, samples=48, starts=8)]
-    queue = sorted(seeds, key=lambda r: (not r.feasible, r.cost_USD_per_h if r.feasible else r.excess))
+    queue = sorted(
+        seeds, key=lambda r: (not r.feasible, r.cost_USD_per_h if r.feasible else r.excess)
+    )
     for seed in queue:
         centre = seed
         moved = True

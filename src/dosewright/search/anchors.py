@@ -132,9 +132,7 @@ def anchors_of_states(model: PlantModel, states: States, rows: NDArray[np.int64]
                     continue
                 row_A = system.A[k].copy()
                 row_A[j] = 0.0
-                ln_a = (
-                    system.lnKs[k] - row_A @ x0 - system.A_water[k] * ln_aw
-                ) / system.A[k, j]
+                ln_a = (system.lnKs[k] - row_A @ x0 - system.A_water[k] * ln_aw) / system.A[k, j]
                 if ln_a < best:
                     best = ln_a
                     solid[a, t] = k
@@ -173,8 +171,9 @@ def feed_anchors(model: PlantModel) -> Anchors:
     """Anchors along titrations of the feed with every reagent, and of feeds already treated.
 
     Liquors treated with each base to a few pHs, and with every other reagent to a few doses (solids
-    removed), are titrated again with every reagent, so that sulfate-rich and sulfate-poor, carbonate-rich and sulfide-rich liquors, and
-    sulfide at several pHs, are all on the lattice.
+    removed), are titrated again with every reagent, so that sulfate-rich and
+    sulfate-poor, carbonate-rich and sulfide-rich liquors, and sulfide at several pHs, are all on
+    the lattice.
     """
     system = model.system
     h = system.components.index("H+")

@@ -148,8 +148,9 @@ class Lattice:
         if self.oxidants:
             m.one_oxidant = pyo.Constraint(K, rule=lambda m, k: sum(m.ox[k, o] for o in O) <= 1)
 
-        ceiling = np.minimum(np.where(np.isfinite(anchors.ceiling), anchors.ceiling * 1e3, 1e9),
-                             self.cap[None, :])
+        ceiling = np.minimum(
+            np.where(np.isfinite(anchors.ceiling), anchors.ceiling * 1e3, 1e9), self.cap[None, :]
+        )
         for k in K:
             for j in J:
                 is_metal = j < anchors.metals
@@ -168,9 +169,7 @@ class Lattice:
             for a, j in dropping:
                 m.cuts.add(m.P[k, a, j] <= float(self.cap[j]) * m.z[k, a])
             for j in M:
-                m.cuts.add(
-                    sum(m.P[k, a, j] for a in by_metal[j]) <= float(self.cap[j]) * m.b[k, j]
-                )
+                m.cuts.add(sum(m.P[k, a, j] for a in by_metal[j]) <= float(self.cap[j]) * m.b[k, j])
                 # a solid that is present holds its metal at the ceiling
                 m.cuts.add(
                     sum(m.D[k, j, a] for a in H)
@@ -235,9 +234,7 @@ class Lattice:
             stock = self._proton_stock(m, k)
             m.cuts.add(
                 stock + leaving_H + gone + m.loose[k]
-                == protons_in
-                + sum(float(self.brought_H[r]) * m.dose[k, r] for r in R)
-                - m.x[k]
+                == protons_in + sum(float(self.brought_H[r]) * m.dose[k, r] for r in R) - m.x[k]
             )
             h0 = stock
             on = sum(m.ox[k, o] for o in range(len(self.oxidants)))
@@ -358,9 +355,11 @@ class Lattice:
         cost: Any = 0.0
         for k in K:
             for r, reagent in enumerate(self.reagents):
-                price = per_mol[r] * (
-                    reagent.price_USD_per_t + rates[r, 5] * prices.water_USD_per_m3
-                ) / 1000.0
+                price = (
+                    per_mol[r]
+                    * (reagent.price_USD_per_t + rates[r, 5] * prices.water_USD_per_m3)
+                    / 1000.0
+                )
                 cost += float(price * to_mol) * m.dose[k, r]
             for o, agent in enumerate(self.oxidants):
                 if agent.price_USD_per_m3 is not None:
@@ -369,8 +368,9 @@ class Lattice:
                     kg = agent.molar_mass_g_per_mol / 1000.0 / agent.electrons
                     kg /= agent.strength * agent.utilisation
                     # the oxidised iron costs its peroxide whenever this agent is the one on
-                    m.cuts.add(self._bought(m, k, o) >= m.x[k] - float(
-                        self.cap.max()) * (1 - m.ox[k, o]))
+                    m.cuts.add(
+                        self._bought(m, k, o) >= m.x[k] - float(self.cap.max()) * (1 - m.ox[k, o])
+                    )
                     cost += float(kg * (agent.price_USD_per_t or 0.0) / 1000.0 * to_mol) * (
                         self._bought(m, k, o)
                     )
@@ -391,7 +391,8 @@ class Lattice:
         income: Any = 0.0
         for p, product in enumerate(flowsheet.products, start=1):
             metal = {
-                x: sum(m.metal[k, p, x] for k in K) for x in (*product.metals, *product.max_impurity)
+                x: sum(m.metal[k, p, x] for k in K)
+                for x in (*product.metals, *product.max_impurity)
             }
             total = sum(metal[x] for x in product.metals)
             dry = sum(m.dry[k, p] for k in K)
@@ -496,4 +497,3 @@ def _chosen(variables: Iterable[Any]) -> int:
     if not values or max(values) < 0.5:
         return -1
     return int(np.argmax(values))
-

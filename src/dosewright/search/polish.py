@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -171,7 +172,7 @@ def log_excess(books: Account) -> Array:
 
 
 def _merit(cost: Array, excess: Array, weight: float) -> Array:
-    return cost + weight * np.maximum(excess, 0.0).sum(axis=1)
+    return np.asarray(cost + weight * np.maximum(excess, 0.0).sum(axis=1))
 
 
 def _linear_steps(
@@ -189,7 +190,8 @@ def _linear_steps(
         cost.append(np.concatenate([gradient[s], np.full(limits, weight)]))
         upper.append(-excess[s] - BACK_OFF)
         bounds += [(-radius[s], radius[s])] * size + [(0.0, None)] * limits
-    answer = linprog(
+    # the stubs know only dense matrices
+    answer: Any = linprog(  # type: ignore[call-overload]
         np.concatenate(cost),
         A_ub=block_diag(blocks, format="csr"),
         b_ub=np.concatenate(upper),
@@ -215,7 +217,6 @@ def polish(
     price, so the elastic programs leave a limit missed only when it cannot be met nearby.
     """
     model, size = problem.model, problem.size
-    starts = u.shape[0]
     if size == 0:
         return _best(problem, problem.run_doses(np.zeros((1, 0))), np.zeros((1, 0)))
     run = problem.run_coordinates(u, guess)
@@ -330,9 +331,7 @@ def _gradients(
     slopes[~usable] = np.eye(size)
     inverse = np.linalg.inv(slopes)  # (S, dose, coordinate)
     gradient = np.einsum("sd,sdu->su", np.where(usable[:, None], d_cost, 0.0), inverse)
-    jacobian = np.einsum(
-        "sdm,sdu->smu", np.where(usable[:, None, None], d_excess, 0.0), inverse
-    )
+    jacobian = np.einsum("sdm,sdu->smu", np.where(usable[:, None, None], d_excess, 0.0), inverse)
     return gradient, jacobian, slopes, usable
 
 
@@ -443,7 +442,9 @@ def polish_structure(
     for u, dose in hints:
         u_rows.append(np.atleast_2d(u))
         dose_rows.append(np.atleast_2d(dose))
-    u_found, dose_found = sampled_starts(problem, rng, samples, starts - len(hints), ln_activity, known)
+    u_found, dose_found = sampled_starts(
+        problem, rng, samples, starts - len(hints), ln_activity, known
+    )
     u_rows.append(u_found)
     dose_rows.append(dose_found)
     u = np.concatenate(u_rows)
@@ -467,7 +468,7 @@ def polish_structure(
 
 
 def _shaken(problem: TrainProblem, best: Polished) -> tuple[Array, Array] | None:
-    """Starts around a polished train, moved in doses instead of coordinates.
+    """Return starts around a polished train, moved in doses instead of coordinates.
 
     Inside a jump of the potential the coordinate moves while the dose, and so the cost, stands
     still: a start that ends there sees no slope. A few per cent of dose step over the jump.
