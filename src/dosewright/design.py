@@ -166,8 +166,8 @@ def to_json(value: Any) -> str:
 
 def versions() -> dict[str, str]:
     """Versions of what computed a design."""
-    found = {"dosewright": metadata.version("dosewright"), "python": platform.python_version()}
-    for name in ("numpy", "scipy", "numba", "pyomo", "highspy"):
+    found = {"python": platform.python_version()}
+    for name in ("dosewright", "numpy", "scipy", "numba", "pyomo", "highspy"):
         try:
             found[name] = metadata.version(name)
         except metadata.PackageNotFoundError:

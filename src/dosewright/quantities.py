@@ -83,6 +83,13 @@ def split_number(text: str) -> tuple[float, str]:
     return value, rest.strip()
 
 
+def _number_of(text: str, hint: str) -> tuple[float, str]:
+    try:
+        return split_number(text)
+    except QuantityError as error:
+        raise QuantityError(f"{error}: {hint}") from error
+
+
 def parse(text: object, kind: str) -> float:
     """Read a quantity of a kind; the result is in ``KINDS[kind].unit`` (fractions as 0 to 1).
 
@@ -95,7 +102,7 @@ def parse(text: object, kind: str) -> float:
     hint = f'write for example "{spec.example}"'
     if not isinstance(text, str):
         raise QuantityError(f"{text!r} carries no unit: {hint}")
-    value, unit = split_number(text)
+    value, unit = _number_of(text, hint)
     if not math.isfinite(value):
         raise QuantityError(f"'{text}' is not a finite number: {hint}")
     if kind == "fraction":
@@ -151,7 +158,7 @@ def parse_concentration(text: object, charge: int, name: str) -> tuple[float, st
     hint = 'write for example "310 mg/L", "4.7 mmol/L", "350 mg/L as N" or "9.5 meq/L"'
     if not isinstance(text, str):
         raise QuantityError(f"{text!r} carries no unit: {hint}")
-    value, unit = split_number(text)
+    value, unit = _number_of(text, hint)
     basis = None
     match = _AS.match(unit)
     if match is not None:

@@ -10,7 +10,7 @@ how far the linear model and the exact one agree.
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -34,11 +34,12 @@ from dosewright.trial import decisions_of, evaluate_on
 
 Progress = Callable[[str], None]
 
-LATTICE_ANCHORS = {1: 100, 2: 100, 3: 45}  # by number of stages: more stages, coarser anchors
+LATTICE_ANCHORS = {1: 160, 2: 160, 3: 60}  # by number of stages: more stages, coarser anchors
 LATTICE_SECONDS = 6.0  # for one proposal; the incumbent is as good a suggestion as the optimum
 PROPOSALS = {1: 2, 2: 5}  # by number of stages
 PROPOSALS_LONGER = 4
-LATTICE_SHARE = 0.4  # of the time
+LATTICE_SHARE = 0.4  # of the time, for the short trains' programs
+SHORT = 2  # stages
 RESERVE_S = 8.0  # kept for the last polish and for re-anchoring
 IDLE_DOSE_KG_PER_M3 = 1e-5  # below which a stage does nothing and is struck out
 WORTH_MOVING = 1e-4  # relative gain for which the search moves to a neighbour
@@ -201,8 +202,13 @@ def optimise(
     anchors = feed_anchors(model)
     search = _Search(model, anchors, began + time_limit_s, say, seed)
     say(f"{anchors.count} anchors; lattice programs for up to {flowsheet.plant.max_stages} stages")
-    seeds = _propose(search, time_limit_s)
-    _descend(search, seeds)
+    # short trains first: their programs take a second, and the longer trains next to them are
+    # found by inserting stages; the longer programs then add what insertion cannot reach
+    stop = search.deadline - (1.0 - LATTICE_SHARE) * time_limit_s
+    short = [k for k in range(1, flowsheet.plant.max_stages + 1) if k <= SHORT]
+    _descend(search, _propose(search, short, stop), search.deadline - 0.35 * time_limit_s)
+    longer = range(SHORT + 1, flowsheet.plant.max_stages + 1)
+    _descend(search, _propose(search, longer, search.deadline - RESERVE_S), search.deadline)
     best = search.best
     assert best is not None  # the descent polishes at least one train
     search.polish(
@@ -216,12 +222,12 @@ def optimise(
     return _design(search, _agreement(search))
 
 
-def _propose(search: _Search, time_limit_s: float) -> list[Polished]:
+def _propose(search: _Search, lengths: Iterable[int], stop: float) -> list[Polished]:
     """Draw structures from the lattices and polish them; return the best of each length."""
     best: dict[int, Polished] = {}
-    most = search.model.flowsheet.plant.max_stages
-    stop = search.deadline - (1.0 - LATTICE_SHARE) * time_limit_s
-    for k in range(1, most + 1):
+    for k in lengths:
+        if time.monotonic() > stop:
+            break
         anchors = thinned(search.anchors, LATTICE_ANCHORS.get(k, 24))
         lattice = Lattice(search.model, anchors, k)
         for drawn in range(PROPOSALS.get(k, PROPOSALS_LONGER)):
@@ -304,21 +310,22 @@ def _neighbours(
             yield (*structure[:k], *structure[k + 1 :]), (*same[:k], *same[k + 1 :])
 
 
-def _descend(search: _Search, seeds: list[Polished]) -> None:
+def _descend(search: _Search, seeds: list[Polished], stop: float) -> None:
     """From each seed, move to a better train that differs in one choice until there is none."""
-    if not seeds:
+    if not seeds and search.best is None:
         first = (Step(0, -1, "waste"),)
         seeds = [search.polish(first, samples=48, starts=8)]
+    stop = min(stop, search.deadline - RESERVE_S)
     queue = sorted(
         seeds, key=lambda r: (not r.feasible, r.cost_USD_per_h if r.feasible else r.excess)
     )
     for seed in queue:
         centre = seed
         moved = True
-        while moved and search.time_left_s > RESERVE_S:
+        while moved and time.monotonic() < stop:
             moved = False
             for structure, origin in _neighbours(search.model, centre.structure):
-                if search.time_left_s < RESERVE_S:
+                if time.monotonic() > stop:
                     return
                 if structure in search.done:
                     continue

@@ -21,8 +21,18 @@ Array = NDArray[np.float64]
 PH_SPACING = 0.35  # of the anchors along a titration
 SULFIDE_SPACING = 1.5  # decades of free sulfide, along a sulfide titration
 DOSE_POINTS = 60  # solved along each titration before thinning
-TREATED_PH = (5.0, 7.0, 9.0)
-MAX_ANCHORS = 100
+JUMP_POINTS = 6  # more between two of them where pH or sulfide jumps
+TREATED_PH = (5.0, 6.0, 8.5)
+TREATED_DOSES = 5  # of a reagent that is no base
+MAX_PH = 12.6  # saturated lime water; no train goes beyond
+MAX_ANCHORS = 160
+LIGAND_CELL_DECADES = {"SO4-2": 0.2}  # sulfate sets how much gypsum forms: finer cells
+
+
+_COLUMNS = (
+    "pH", "ceiling", "solid", "drops", "drops_H", "protons", "base_protons", "ligand", "ln_activity",
+    "log_free_sulfide",
+)  # fmt: skip
 
 
 @dataclass(frozen=True, eq=False)
@@ -48,6 +58,7 @@ class Anchors:
     base_protons: Array
     ligand: Array
     ln_activity: Array
+    log_free_sulfide: Array
 
     @property
     def count(self) -> int:
@@ -55,18 +66,13 @@ class Anchors:
         return int(self.pH.size)
 
     def joined(self, other: Anchors) -> Anchors:
-        """Both sets of anchors over the same components."""
-        return Anchors(
-            self.tracked,
-            self.metals,
-            *(
-                np.concatenate([getattr(self, name), getattr(other, name)])
-                for name in (
-                    "pH", "ceiling", "solid", "drops", "drops_H", "protons", "base_protons",
-                    "ligand", "ln_activity",
-                )
-            ),
-        )  # fmt: skip
+        """Return both sets of anchors, over the same components."""
+        columns = (np.concatenate([getattr(self, name), getattr(other, name)]) for name in _COLUMNS)
+        return Anchors(self.tracked, self.metals, *columns)
+
+    def take(self, rows: NDArray[np.int64]) -> Anchors:
+        """Return the anchors of the given rows."""
+        return Anchors(self.tracked, self.metals, *(getattr(self, name)[rows] for name in _COLUMNS))
 
 
 def tracked_components(model: PlantModel) -> tuple[tuple[str, ...], int]:
@@ -146,7 +152,7 @@ def anchors_of_states(model: PlantModel, states: States, rows: NDArray[np.int64]
         base[a] = float((m * nu[:, h])[untracked].sum())
     return Anchors(
         tracked, metals, states.pH[rows], ceiling, solid, drops, drops_H, protons, base, ligand,
-        states.ln_activity[rows],
+        states.ln_activity[rows], _log_sulfide(system.components, states.take(rows)),
     )  # fmt: skip
 
 
@@ -180,25 +186,29 @@ def feed_anchors(model: PlantModel) -> Anchors:
     solvent = float(model.feed.water[0]) * WATER_KG_PER_MOL
     feed = model.feed.totals[0] / solvent
     stoichiometry = model.reagent_components
-    liquors = [(-1, feed)]
-    for i in range(stoichiometry.shape[0]):
-        states, totals = _titrate(model, feed, stoichiometry[i])
-        if stoichiometry[i, h] < 0.0:
-            rows = [
-                int(np.argmin(abs(np.where(states.status == 0, states.pH, 99.0) - pH)))
-                for pH in TREATED_PH
-            ]
-        else:
-            spaced = _thin(system.components, states)
-            rows = [int(r) for r in spaced[1 :: max(1, (len(spaced) - 1) // 3)][:3]]
-        for row in rows:
-            left = totals[row] - states.phase_mol_per_kg[row] @ system.A
-            liquors.append((i, np.where(abs(left) < 1e-15, 0.0, left)))
+    fresh = [feed]
+    if model.flowsheet.oxidants:
+        fresh.append(_oxidised(model, feed))
+    liquors = [(-1, liquor) for liquor in fresh]
+    for liquor in fresh:
+        for i in range(stoichiometry.shape[0]):
+            states, totals = _titrate(model, liquor, stoichiometry[i])
+            if stoichiometry[i, h] < 0.0:
+                rows = [
+                    int(np.argmin(abs(np.where(states.status == 0, states.pH, 99.0) - pH)))
+                    for pH in TREATED_PH
+                ]
+            else:
+                spaced = _thin(system.components, states)
+                rows = [int(r) for r in spaced[1 :: max(1, (len(spaced) - 1) // TREATED_DOSES)]]
+            for row in rows:
+                left = totals[row] - states.phase_mol_per_kg[row] @ system.A
+                liquors.append((i, np.where(abs(left) < 1e-15, 0.0, left)))
     parts: list[Anchors] = []
     for n, (treated_with, liquor) in enumerate(liquors):
         for i in range(stoichiometry.shape[0]):
             both_bases = stoichiometry[i, h] < 0.0 and stoichiometry[treated_with, h] < 0.0
-            if treated_with >= 0 and both_bases and n % 3 != 2:
+            if treated_with >= 0 and both_bases and (n - len(fresh)) % 3 != 1:
                 continue  # one treated liquor per base is enough for the other bases
             states, _ = _titrate(model, liquor, stoichiometry[i])
             parts.append(anchors_of_states(model, states, _thin(system.components, states)))
@@ -208,8 +218,36 @@ def feed_anchors(model: PlantModel) -> Anchors:
     return thinned(joined, MAX_ANCHORS)
 
 
+def _oxidised(model: PlantModel, liquor: Array) -> Array:
+    """Return the liquor with its Fe(II) converted as the best oxidant does."""
+    names = model.system.components
+    fe2, fe3, h = (names.index(c) for c in ("Fe+2", "Fe+3", "H+"))
+    share = max(agent.conversion for agent in model.flowsheet.oxidants.values())
+    out = liquor.copy()
+    moved = share * out[fe2]
+    out[fe2] -= moved
+    out[fe3] += moved
+    out[h] -= moved
+    return out
+
+
 def _titrate(model: PlantModel, liquor: Array, reagent: Array) -> tuple[States, Array]:
+    """Solve a titration, with more doses where pH or free sulfide jumps."""
     dose = np.concatenate([[0.0], np.geomspace(1e-5, 1.5, DOSE_POINTS)])
+    states, totals = _dosed(model, liquor, reagent, dose)
+    height = np.column_stack(
+        [states.pH / PH_SPACING, _log_sulfide(model.system.components, states) / SULFIDE_SPACING]
+    )
+    jump = abs(np.diff(height, axis=0)).max(axis=1) > 1.5
+    if jump.any():
+        between = np.linspace(0.0, 1.0, JUMP_POINTS + 2)[1:-1]
+        extra = (dose[:-1][jump, None] + np.diff(dose)[jump, None] * between).ravel()
+        dose = np.unique(np.concatenate([dose, extra]))
+        states, totals = _dosed(model, liquor, reagent, dose)
+    return states, totals
+
+
+def _dosed(model: PlantModel, liquor: Array, reagent: Array, dose: Array) -> tuple[States, Array]:
     totals = liquor[None, :] + dose[:, None] * reagent[None, :]
     # tiny negative totals are rounding of a component that has left altogether
     h = model.system.components.index("H+")
@@ -226,17 +264,20 @@ def _titrate(model: PlantModel, liquor: Array, reagent: Array) -> tuple[States, 
     return states, totals / states.water_kg[:, None]
 
 
+def _log_sulfide(components: tuple[str, ...], states: States) -> Array:
+    """log10 of the free sulfide's activity, not below -30; zero where there is no sulfide."""
+    if "HS-" not in components:
+        return np.zeros(states.status.size)
+    x = states.ln_activity[:, components.index("HS-")] / LN10
+    return np.asarray(np.maximum(np.where(np.isfinite(x), x, -30.0), -30.0))
+
+
 def _thin(components: tuple[str, ...], states: States) -> NDArray[np.int64]:
     """Rows spaced by pH and by free sulfide."""
-    x = states.ln_activity / LN10
-    sulfide = (
-        np.maximum(x[:, components.index("HS-")], -30.0)
-        if "HS-" in components
-        else np.zeros(x.shape[0])
-    )
+    sulfide = _log_sulfide(components, states)
     kept: list[int] = []
-    for row in range(x.shape[0]):
-        if states.status[row] != 0:
+    for row in range(sulfide.size):
+        if states.status[row] != 0 or states.pH[row] > MAX_PH:
             continue
         far = True
         if kept:
@@ -252,25 +293,19 @@ def _thin(components: tuple[str, ...], states: States) -> NDArray[np.int64]:
 
 def thinned(anchors: Anchors, most: int) -> Anchors:
     """Keep one anchor in each cell of pH and ligands; cells widen until ``most`` are left."""
-    ligands = np.log10(np.maximum(anchors.ligand[:, anchors.metals :], 1e-7))
-    spacing = PH_SPACING
+    names = anchors.tracked[anchors.metals :]
+    columns = [anchors.pH / PH_SPACING]
+    for t, name in enumerate(names, start=anchors.metals):
+        decades = LIGAND_CELL_DECADES.get(name, 1.0)
+        columns.append(np.log10(np.maximum(anchors.ligand[:, t], 1e-5)) / decades)
+        if name == "HS-":
+            # near its metals' equivalence sulfide falls by decades while its total stands still
+            columns.append(anchors.log_free_sulfide / SULFIDE_SPACING)
+    height = np.column_stack(columns)
+    widen = 1.0
     while True:
-        cell = np.column_stack(
-            [np.round(anchors.pH / spacing), np.round(ligands / max(1.0, 2.0 * spacing))]
-        )
-        _, first = np.unique(cell, axis=0, return_index=True)
+        _, first = np.unique(np.round(height / widen), axis=0, return_index=True)
         if first.size <= most:
             break
-        spacing *= 1.15
-    keep = np.sort(first)
-    return Anchors(
-        anchors.tracked,
-        anchors.metals,
-        *(
-            getattr(anchors, name)[keep]
-            for name in (
-                "pH", "ceiling", "solid", "drops", "drops_H", "protons", "base_protons", "ligand",
-                "ln_activity",
-            )
-        ),
-    )  # fmt: skip
+        widen *= 1.12
+    return anchors.take(np.sort(first))

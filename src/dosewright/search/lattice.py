@@ -28,10 +28,13 @@ Array = NDArray[np.float64]
 LIMIT_SLACK = 3.0  # effluent limits are relaxed by this; the exact model enforces the true ones
 QUALITY_SLACK = 0.97  # product limits likewise, by a few per cent
 PH_SLACK = 0.3
-#: of the feed's equivalents: anchors are near the liquors met, not on them, and a sulfide dose that
-#: must match its metals to the last per mille would find no anchor at all
-PROTON_SLACK = 0.01
-LIGAND_WINDOW = {"CO3-2": 3.0, "HS-": 6.0}  # factor around what the anchor holds dissolved
+#: protons that need not balance, mmol per kg: one per cent of the feed's equivalents, or in dilute
+#: liquors up to four. Anchors are near the liquors met, not on them, and a sulfide dose that must
+#: match its metals to the last per mille would find no anchor at all
+PROTON_SLACK = (0.01, 0.04, 0.3)
+#: how far the dissolved ligand may lie (below, above) what the anchor holds, as factors. Above it for
+#: sulfate the anchor's ceiling of calcium would promise too little gypsum in the cake
+LIGAND_WINDOW = {"CO3-2": (3.0, 3.0), "HS-": (6.0, 6.0), "SO4-2": (1.3, 1.2)}
 SMALL_MMOL = 1e-3
 LEAST_DOSE = 0.003  # of the largest: a stage that does nothing is a train with one stage fewer
 
@@ -127,7 +130,9 @@ class Lattice:
         m.P = pyo.Var(K, dropping, domain=pyo.NonNegativeReals)
         m.x = pyo.Var(K, domain=pyo.NonNegativeReals)  # oxidised
         m.vent = pyo.Var(K, J, domain=pyo.NonNegativeReals)
-        give = PROTON_SLACK * (self.equivalents + abs(self.feed_H))
+        size = self.equivalents + abs(self.feed_H)
+        share, most_share, most = PROTON_SLACK
+        give = max(share * size, min(most_share * size, most))
         m.loose = pyo.Var(K, bounds=(-give, give))
         m.cuts = pyo.ConstraintList()
         by_metal: list[list[int]] = [[a for a, t in dropping if t == j] for j in M]
@@ -158,10 +163,10 @@ class Lattice:
                     if is_metal:
                         m.cuts.add(m.D[k, j, a] <= float(ceiling[a, j]) * m.z[k, a])
                     elif anchors.tracked[j] in LIGAND_WINDOW:
-                        window = LIGAND_WINDOW[anchors.tracked[j]]
-                        top = anchors.ligand[a, j] * 1e3 * window + SMALL_MMOL
+                        below, above = LIGAND_WINDOW[anchors.tracked[j]]
+                        top = anchors.ligand[a, j] * 1e3 * above + SMALL_MMOL
                         m.cuts.add(m.D[k, j, a] <= float(min(top, self.cap[j])) * m.z[k, a])
-                        low = anchors.ligand[a, j] * 1e3 / window - SMALL_MMOL
+                        low = anchors.ligand[a, j] * 1e3 / below - SMALL_MMOL
                         if low > 0.0:
                             m.cuts.add(m.D[k, j, a] >= float(min(low, self.cap[j])) * m.z[k, a])
                     else:
