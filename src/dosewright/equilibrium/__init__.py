@@ -13,7 +13,7 @@ from dosewright.equilibrium.answers import (
     equilibrate,
     equilibrate_batch,
 )
-from dosewright.equilibrium.vessel import States, solve
+from dosewright.equilibrium.vessel import States, join_states, solve
 
 __all__ = [
     "Amounts",
@@ -24,5 +24,6 @@ __all__ = [
     "certify",
     "equilibrate",
     "equilibrate_batch",
+    "join_states",
     "solve",
 ]

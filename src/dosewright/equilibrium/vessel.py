@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from itertools import pairwise
@@ -105,6 +106,14 @@ class States:
     def why_failed(self, row: int) -> str:
         """Say in words why problem ``row`` was not solved."""
         return _STATUS_TEXT.get(int(self.status[row]), "solved")
+
+
+def join_states(parts: Sequence[States]) -> States:
+    """Stack states of the same system."""
+    names = ("ln_activity", "molality", "phase_mol_per_kg", "ln_gamma", "info")
+    return States(
+        parts[0].system, *(np.concatenate([getattr(p, name) for p in parts]) for name in names)
+    )
 
 
 def hold_phase(system: System, phase: str, component: str) -> System:

@@ -9,10 +9,12 @@ how far the linear model and the exact one agree.
 
 from __future__ import annotations
 
+import os
 import time
 from collections.abc import Callable, Iterable, Iterator, Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, field
-from typing import Any
+from typing import Any, TypeVar
 
 import numpy as np
 
@@ -33,11 +35,14 @@ from dosewright.search.polish import (
 from dosewright.trial import decisions_of, evaluate_on
 
 Progress = Callable[[str], None]
+T = TypeVar("T")
 
 LATTICE_ANCHORS = {1: 160, 2: 160, 3: 60}  # by number of stages: more stages, coarser anchors
 LATTICE_SECONDS = 6.0  # for one proposal; the incumbent is as good a suggestion as the optimum
 PROPOSALS = {1: 2, 2: 5}  # by number of stages
-PROPOSALS_LONGER = 4
+PROPOSALS_LONGER = 2
+SEEDS = 3  # trains from which the search descends, of each round of proposals
+BATCH = max(2, os.cpu_count() or 1)  # neighbours polished side by side
 LATTICE_SHARE = 0.4  # of the time, for the short trains' programs
 SHORT = 2  # stages
 RESERVE_S = 8.0  # kept for the last polish and for re-anchoring
@@ -59,6 +64,7 @@ class _Search:
     proposals: int = 0
     lattice_value: float = float("nan")
     evaluations: int = 0
+    pool: ThreadPoolExecutor = field(default_factory=lambda: ThreadPoolExecutor(BATCH))
 
     @property
     def time_left_s(self) -> float:
@@ -75,22 +81,36 @@ class _Search:
         return np.random.default_rng([self.seed, *flat])
 
     def polish(self, structure: Structure, **options: Any) -> Polished:
-        """Polish a structure and remember the result when it is the best known of it."""
-        result = polish_structure(
-            self.model,
-            structure,
-            rng=self.rng_of(structure),
-            ln_activity=self.anchors.ln_activity,
-            **options,
-        )
-        self.evaluations += result.evaluations
-        earlier = self.done.get(structure)
-        if earlier is None or ahead(result, earlier):
-            self.done[structure] = result
-        if self.best is None or ahead(result, self.best):
-            self.best = result
-            self.say(f"{train_text(self.model, structure)}: {verdict(result)}")
-        return self.done[structure]
+        """Polish a structure; return the best known of it."""
+        return self.polish_all([(structure, options)])[0]
+
+    def polish_all(self, jobs: Sequence[tuple[Structure, dict[str, Any]]]) -> list[Polished]:
+        """Polish several structures side by side; return the best known of each.
+
+        The kernel lets go of the interpreter, so threads share the cores; results are taken in the
+        order of the jobs, so that the outcome does not depend on which finishes first.
+        """
+
+        def work(job: tuple[Structure, dict[str, Any]]) -> Polished:
+            structure, options = job
+            return polish_structure(
+                self.model,
+                structure,
+                rng=self.rng_of(structure),
+                ln_activity=self.anchors.ln_activity,
+                **options,
+            )
+
+        results = list(self.pool.map(work, jobs)) if len(jobs) > 1 else [work(jobs[0])]
+        for (structure, _), result in zip(jobs, results, strict=True):
+            self.evaluations += result.evaluations
+            earlier = self.done.get(structure)
+            if earlier is None or ahead(result, earlier):
+                self.done[structure] = result
+            if self.best is None or ahead(result, self.best):
+                self.best = result
+                self.say(f"{train_text(self.model, structure)}: {verdict(result)}")
+        return [self.done[structure] for structure, _ in jobs]
 
     def is_close(self, result: Polished, centre: Polished) -> bool:
         """Whether a quickly polished train could beat ``centre`` once polished in earnest."""
@@ -224,7 +244,7 @@ def optimise(
 
 def _propose(search: _Search, lengths: Iterable[int], stop: float) -> list[Polished]:
     """Draw structures from the lattices and polish them; return the best of each length."""
-    best: dict[int, Polished] = {}
+    found_trains: dict[Structure, Polished] = {}
     for k in lengths:
         if time.monotonic() > stop:
             break
@@ -249,9 +269,13 @@ def _propose(search: _Search, lengths: Iterable[int], stop: float) -> list[Polis
             if search.best is not before:
                 search.lattice_value = found.value_USD_per_h
             result = search.trimmed(result)
-            if k not in best or ahead(result, best[k]):
-                best[k] = result
-    return list(best.values())
+            found_trains[result.structure] = result
+    return sorted(found_trains.values(), key=_merit)[:SEEDS]
+
+
+def _merit(result: Polished) -> tuple[bool, float]:
+    """Sort key: feasible by cost, then the others by what they miss."""
+    return (not result.feasible, result.cost_USD_per_h if result.feasible else result.excess)
 
 
 def _hint(
@@ -316,33 +340,40 @@ def _descend(search: _Search, seeds: list[Polished], stop: float) -> None:
         first = (Step(0, -1, "waste"),)
         seeds = [search.polish(first, samples=48, starts=8)]
     stop = min(stop, search.deadline - RESERVE_S)
-    queue = sorted(
-        seeds, key=lambda r: (not r.feasible, r.cost_USD_per_h if r.feasible else r.excess)
-    )
-    for seed in queue:
+    for seed in seeds:
         centre = seed
         moved = True
         while moved and time.monotonic() < stop:
             moved = False
-            for structure, origin in _neighbours(search.model, centre.structure):
+            fresh = [
+                (structure, _quick(known_of(centre, structure, origin)))
+                for structure, origin in _neighbours(search.model, centre.structure)
+                if structure not in search.done
+            ]
+            for batch in batched(fresh, BATCH):
                 if time.monotonic() > stop:
                     return
-                if structure in search.done:
-                    continue
-                result = search.trimmed(
-                    search.polish(structure, **_quick(known_of(centre, structure, origin)))
-                )
-                if search.is_close(result, centre):
-                    result = search.polish(
-                        result.structure,
-                        hints=[(result.coordinates, _lead_doses(search, result))],
-                        samples=24,
-                        starts=6,
-                        shakes=1,
-                    )
-                if ahead(result, centre, WORTH_MOVING):
-                    centre, moved = result, True
+                results = [search.trimmed(r) for r in search.polish_all(batch)]
+                closer = [r for r in results if search.is_close(r, centre)]
+                earnest = [(r.structure, _earnest(search, r)) for r in closer]
+                results += search.polish_all(earnest) if earnest else []
+                for result in results:
+                    if ahead(result, centre, WORTH_MOVING):
+                        centre, moved = result, True
+                if moved:
                     break
+
+
+def _earnest(search: _Search, result: Polished) -> dict[str, Any]:
+    """Options of a thorough polish, from what a quick one found."""
+    hint = (result.coordinates, _lead_doses(search, result))
+    return {"hints": [hint], "samples": 24, "starts": 6, "shakes": 1}
+
+
+def batched(items: Sequence[T], size: int) -> Iterator[Sequence[T]]:
+    """Yield runs of ``size`` items."""
+    for i in range(0, len(items), size):
+        yield items[i : i + size]
 
 
 def _lead_doses(search: _Search, result: Polished) -> np.ndarray:

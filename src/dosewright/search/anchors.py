@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dosewright.chemistry.activity import LN10, WATER_KG_PER_MOL
-from dosewright.equilibrium import States, solve
+from dosewright.equilibrium import States, join_states, solve
 from dosewright.plant import PlantModel, Run
 
 Array = NDArray[np.float64]
@@ -204,18 +204,16 @@ def feed_anchors(model: PlantModel) -> Anchors:
             for row in rows:
                 left = totals[row] - states.phase_mol_per_kg[row] @ system.A
                 liquors.append((i, np.where(abs(left) < 1e-15, 0.0, left)))
-    parts: list[Anchors] = []
+    parts: list[States] = []
     for n, (treated_with, liquor) in enumerate(liquors):
         for i in range(stoichiometry.shape[0]):
             both_bases = stoichiometry[i, h] < 0.0 and stoichiometry[treated_with, h] < 0.0
             if treated_with >= 0 and both_bases and (n - len(fresh)) % 3 != 1:
                 continue  # one treated liquor per base is enough for the other bases
             states, _ = _titrate(model, liquor, stoichiometry[i])
-            parts.append(anchors_of_states(model, states, _thin(system.components, states)))
-    joined = parts[0]
-    for part in parts[1:]:
-        joined = joined.joined(part)
-    return thinned(joined, MAX_ANCHORS)
+            parts.append(states.take(_thin(system.components, states)))
+    joined = join_states(parts)
+    return anchors_of_states(model, joined, thinned_rows(model, joined, MAX_ANCHORS))
 
 
 def _oxidised(model: PlantModel, liquor: Array) -> Array:
@@ -291,21 +289,38 @@ def _thin(components: tuple[str, ...], states: States) -> NDArray[np.int64]:
     return np.array(kept, dtype=np.int64)
 
 
-def thinned(anchors: Anchors, most: int) -> Anchors:
-    """Keep one anchor in each cell of pH and ligands; cells widen until ``most`` are left."""
-    names = anchors.tracked[anchors.metals :]
-    columns = [anchors.pH / PH_SPACING]
-    for t, name in enumerate(names, start=anchors.metals):
-        decades = LIGAND_CELL_DECADES.get(name, 1.0)
-        columns.append(np.log10(np.maximum(anchors.ligand[:, t], 1e-5)) / decades)
+def _height(pH: Array, ligand: dict[str, Array], log_free_sulfide: Array) -> Array:
+    """Where liquors stand, in units of the spacing wanted along each axis."""
+    columns = [pH / PH_SPACING]
+    for name, total in ligand.items():
+        columns.append(np.log10(np.maximum(total, 1e-5)) / LIGAND_CELL_DECADES.get(name, 1.0))
         if name == "HS-":
             # near its metals' equivalence sulfide falls by decades while its total stands still
-            columns.append(anchors.log_free_sulfide / SULFIDE_SPACING)
-    height = np.column_stack(columns)
+            columns.append(log_free_sulfide / SULFIDE_SPACING)
+    return np.column_stack(columns)
+
+
+def _one_per_cell(height: Array, most: int) -> NDArray[np.int64]:
+    """Rows, one in each cell; cells widen until ``most`` are left."""
     widen = 1.0
     while True:
         _, first = np.unique(np.round(height / widen), axis=0, return_index=True)
         if first.size <= most:
-            break
+            return np.sort(first)
         widen *= 1.12
-    return anchors.take(np.sort(first))
+
+
+def thinned_rows(model: PlantModel, states: States, most: int) -> NDArray[np.int64]:
+    """Rows of states that differ enough to be anchors."""
+    tracked, metals = tracked_components(model)
+    components = model.system.components
+    totals = states.dissolved_mol_per_kg
+    ligand = {name: totals[:, components.index(name)] for name in tracked[metals:]}
+    return _one_per_cell(_height(states.pH, ligand, _log_sulfide(components, states)), most)
+
+
+def thinned(anchors: Anchors, most: int) -> Anchors:
+    """Keep at most ``most`` anchors, one in each cell of pH and ligands."""
+    names = anchors.tracked[anchors.metals :]
+    ligand = {n: anchors.ligand[:, anchors.metals + t] for t, n in enumerate(names)}
+    return anchors.take(_one_per_cell(_height(anchors.pH, ligand, anchors.log_free_sulfide), most))
