@@ -720,7 +720,8 @@ def _settle(model: PlantModel, pulp: Stream, solvent: Array) -> tuple[Stream, St
         out=np.full(dry.size, default_ratio),
         where=precipitate > 0.0,
     )
-    salts = (pulp.totals @ model.component_g_per_mol) / 1000.0 / solvent
+    salts_g = pulp.totals @ model.component_g_per_mol + pulp.idle @ model.reagent_g_per_mol
+    salts = salts_g / 1000.0 / solvent
     # moisture is water over (water + solids + salts): w(1-x) = x(s + salts w)
     share = ratio / (1.0 + ratio)
     ratio = share / (1.0 - share - share * salts)

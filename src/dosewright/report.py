@@ -120,6 +120,8 @@ def _trial(page: _Page, trial: Trial) -> None:
         page.line(f"Misses {len(trial.shortfalls)} of the limits entered:")
         for shortfall in trial.shortfalls:
             page.line(f"  {shortfall}")
+    for note in trial.notes:
+        page.line(f"Note: {note}.")
     _feed(page, trial)
     _train(page, trial)
     _cakes(page, trial)

@@ -547,7 +547,25 @@ def report_run(run: Run, destinations: Sequence[str]) -> Trial:
         cautions=cautions_of(run),
         closure=model.closure,
         balance=balance_of(run),
+        notes=_range_notes(run),
     )
+
+
+def _range_notes(run: Run) -> list[str]:
+    """Say where the activity model is used beyond its range."""
+    activity = run.model.activity
+    limit = activity.max_ionic_strength_mol_per_kg
+    strengths = {"feed": float(run.model.feed_states.ionic_strength[0])}
+    for k, stage in enumerate(run.stages, start=1):
+        strengths[f"stage {k}"] = float(stage.states.ionic_strength[0])
+    high = {where: value for where, value in strengths.items() if value > limit > 0.0}
+    if not high:
+        return []
+    listed = ", ".join(f"{where} {value:.2g}" for where, value in high.items())
+    return [
+        f"ionic strength above the {limit:g} mol/kg up to which the {activity.name} activity model is "
+        f"used ({listed} mol/kg): the figures are extrapolated"
+    ]
 
 
 def _limit(row: LimitBatch) -> Limit:
