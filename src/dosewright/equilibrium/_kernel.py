@@ -18,6 +18,7 @@ from numba import njit
 
 EXP_CAP = 250.0  # largest exponent taken; beyond it a start is simply 'far too much'
 TAU_STEPS = (1.0, 0.25, 0.06, 0.015, 0.004)
+LOG_IMBALANCE = 0.02  # at which the homotopy hands over to the active set
 BALANCE_TARGET = 1e-13  # relative balance residual at which an inner solve stops
 MAX_OUTER = 80
 
@@ -88,33 +89,23 @@ def _evaluate(x, lnK, ptr, idx, val, m):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _log_balances(x, T, lnK, ptr, idx, val, m, A, B, n0, tau, n, nc, nk, P, N, F):
-    """Fill ``P``, ``N`` (positive and negative terms of each balance), ``F = ln(N/P)``, ``n``.
-
-    Returns the sum of squares of ``F``.
-    """
-    _evaluate(x, lnK, ptr, idx, val, m)
+def _log_balances(x, T, base, ptr, idx, val, slope, c, nc, P, N, F):
+    """Fill amounts ``c``, the positive and negative terms ``P``, ``N`` of every balance and
+    ``F = ln(N/P)``; return the sum of squares of ``F``."""
     for j in range(nc):
         P[j] = max(-T[j], 1e-300)
         N[j] = max(T[j], 1e-300)
-    for i in range(lnK.shape[0]):
+    for i in range(base.shape[0]):
+        y = base[i]
         for p in range(ptr[i], ptr[i + 1]):
-            v = val[p] * m[i]
+            y += slope[p] * x[idx[p]]
+        c[i] = np.exp(min(y, EXP_CAP))
+        for p in range(ptr[i], ptr[i + 1]):
+            v = val[p] * c[i]
             if v > 0.0:
                 P[idx[p]] += v
             else:
                 N[idx[p]] -= v
-    for k in range(nk):
-        s = -B[k]
-        for j in range(nc):
-            s += A[k, j] * x[j]
-        n[k] = n0[k] * np.exp(min(s / tau, EXP_CAP))
-        for j in range(nc):
-            v = A[k, j] * n[k]
-            if v > 0.0:
-                P[j] += v
-            else:
-                N[j] -= v
     total = 0.0
     for j in range(nc):
         F[j] = np.log(N[j] / P[j])
@@ -123,7 +114,69 @@ def _log_balances(x, T, lnK, ptr, idx, val, m, A, B, n0, tau, n, nc, nk, P, N, F
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _homotopy(x, T, lnK, ptr, idx, val, m, A, B, n0, tau, n, nc, nk, max_iter):
+def _with_phases(lnK, ptr, idx, val, A, B, n0, tau, nc, nk):
+    """Append the phases to the species' rows: amount n0 exp((A.x - B)/tau), slope A/tau."""
+    ns = lnK.shape[0]
+    count = ptr[ns]
+    for k in range(nk):
+        for j in range(nc):
+            if A[k, j] != 0.0:
+                count += 1
+    base = np.empty(ns + nk)
+    jptr = np.empty(ns + nk + 1, np.int64)
+    jidx = np.empty(count, np.int64)
+    jval = np.empty(count)
+    jslope = np.empty(count)
+    fill = ptr[ns]
+    base[:ns] = lnK
+    jptr[: ns + 1] = ptr[: ns + 1]
+    jidx[:fill] = idx[:fill]
+    jval[:fill] = val[:fill]
+    jslope[:fill] = val[:fill]
+    for k in range(nk):
+        base[ns + k] = np.log(n0[k]) - B[k] / tau
+        for j in range(nc):
+            if A[k, j] != 0.0:
+                jidx[fill] = j
+                jval[fill] = A[k, j]
+                jslope[fill] = A[k, j] / tau
+                fill += 1
+        jptr[ns + k + 1] = fill
+    return base, jptr, jidx, jval, jslope
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _lower_start(x, T, base, ptr, idx, val, slope, nc):
+    """Lower a start until no species or phase holds more than its scarcest component allows.
+
+    A sulfide e^40 times too much dominates the balances of metal, sulfide and protons alike, which
+    leaves Newton's matrix all but singular; taking the scarcest component down undoes that.
+    """
+    for _ in range(6):
+        high = 0.0
+        for i in range(base.shape[0]):
+            y = base[i]
+            scarce = -1
+            room = 1e300
+            steep = 1.0
+            for p in range(ptr[i], ptr[i + 1]):
+                j = idx[p]
+                y += slope[p] * x[j]
+                if val[p] > 0.0 and T[j] > 0.0 and T[j] / val[p] < room:
+                    room = T[j] / val[p]
+                    scarce = j
+                    steep = slope[p]
+            if scarce >= 0:
+                excess = y - np.log(room)
+                if excess > 0.0:
+                    x[scarce] -= excess / steep
+                    high = max(high, excess)
+        if high < 1.0:
+            break
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _homotopy(x, T, lnK, ptr, idx, val, A, B, n0, tau, n, nc, nk, max_iter, fresh):
     """Minimise the smoothed convex function at ``tau``; return the largest log imbalance left.
 
     A balance is ``P_j = N_j``, its positive over its negative terms. Newton on ``ln P - ln N``
@@ -132,6 +185,9 @@ def _homotopy(x, T, lnK, ptr, idx, val, m, A, B, n0, tau, n, nc, nk, max_iter):
     damped Newton step on the convex function, whose length ln(1 + b)/b with b the largest change
     of an exponent is known to descend for sums of exponentials, carries on.
     """
+    base, jptr, jidx, jval, jslope = _with_phases(lnK, ptr, idx, val, A, B, n0, tau, nc, nk)
+    rows = base.shape[0]
+    c = np.empty(rows)
     P = np.empty(nc)
     N = np.empty(nc)
     F = np.empty(nc)
@@ -144,37 +200,34 @@ def _homotopy(x, T, lnK, ptr, idx, val, m, A, B, n0, tau, n, nc, nk, max_iter):
     JP = np.empty((nc, nc))
     JN = np.empty((nc, nc))
     M = np.empty((nc, nc))
-    merit = _log_balances(x, T, lnK, ptr, idx, val, m, A, B, n0, tau, n, nc, nk, P, N, F)
+    if fresh:
+        _lower_start(x, T, base, jptr, jidx, jval, jslope, nc)
+    merit = _log_balances(x, T, base, jptr, jidx, jval, jslope, c, nc, P, N, F)
     convex_steps = 0
+    worst = 0.0
     for _ in range(max_iter):
         worst = 0.0
         for j in range(nc):
             worst = max(worst, abs(F[j]))
-        if worst < 1e-3:
+        if worst < LOG_IMBALANCE:
             break
         JP[:] = 0.0
         JN[:] = 0.0
-        for i in range(lnK.shape[0]):
-            c = m[i]
-            for p in range(ptr[i], ptr[i + 1]):
-                j = idx[p]
-                v = val[p] * c
+        for i in range(rows):
+            amount = c[i]
+            if amount == 0.0:
+                continue
+            for p in range(jptr[i], jptr[i + 1]):
+                j = jidx[p]
+                v = jval[p] * amount
                 if v > 0.0:
-                    for q in range(ptr[i], ptr[i + 1]):
-                        JP[j, idx[q]] += v * val[q]
+                    for q in range(jptr[i], jptr[i + 1]):
+                        JP[j, jidx[q]] += v * jslope[q]
                 else:
-                    for q in range(ptr[i], ptr[i + 1]):
-                        JN[j, idx[q]] -= v * val[q]
-        for k in range(nk):
-            for j in range(nc):
-                v = A[k, j] * n[k] / tau
-                if v > 0.0:
-                    for q in range(nc):
-                        JP[j, q] += v * A[k, q]
-                elif v < 0.0:
-                    for q in range(nc):
-                        JN[j, q] -= v * A[k, q]
+                    for q in range(jptr[i], jptr[i + 1]):
+                        JN[j, jidx[q]] -= v * jslope[q]
         accepted = False
+        merit_new = merit
         if convex_steps == 0:
             for j in range(nc):
                 d[j] = F[j]
@@ -190,7 +243,7 @@ def _homotopy(x, T, lnK, ptr, idx, val, m, A, B, n0, tau, n, nc, nk, max_iter):
                         for j in range(nc):
                             xn[j] = x[j] + step * d[j]
                         merit_new = _log_balances(
-                            xn, T, lnK, ptr, idx, val, m, A, B, n0, tau, n, nc, nk, Pn, Nn, Fn
+                            xn, T, base, jptr, jidx, jval, jslope, c, nc, Pn, Nn, Fn
                         )
                         if merit_new < merit * (1.0 - 0.1 * step):
                             accepted = True
@@ -213,33 +266,26 @@ def _homotopy(x, T, lnK, ptr, idx, val, m, A, B, n0, tau, n, nc, nk, max_iter):
             for j in range(nc):
                 d[j] *= D[j]
             b = 0.0
-            for i in range(lnK.shape[0]):
+            for i in range(rows):
                 y = 0.0
-                for p in range(ptr[i], ptr[i + 1]):
-                    y += val[p] * d[idx[p]]
-                b = max(b, abs(y))
-            for k in range(nk):
-                y = 0.0
-                for j in range(nc):
-                    y += A[k, j] * d[j] / tau
+                for p in range(jptr[i], jptr[i + 1]):
+                    y += jslope[p] * d[jidx[p]]
                 b = max(b, abs(y))
             if not np.isfinite(b) or b == 0.0:
                 return worst
             step = np.log1p(b) / b
             for j in range(nc):
                 xn[j] = x[j] + step * d[j]
-            merit_new = _log_balances(
-                xn, T, lnK, ptr, idx, val, m, A, B, n0, tau, n, nc, nk, Pn, Nn, Fn
-            )
+            merit_new = _log_balances(xn, T, base, jptr, jidx, jval, jslope, c, nc, Pn, Nn, Fn)
         for j in range(nc):
             x[j] = xn[j]
             P[j] = Pn[j]
             N[j] = Nn[j]
             F[j] = Fn[j]
         merit = merit_new
-    worst = 0.0
-    for j in range(nc):
-        worst = max(worst, abs(F[j]))
+    ns = rows - nk
+    for k in range(nk):
+        n[k] = c[ns + k]
     return worst
 
 
@@ -484,7 +530,6 @@ def _inner(x, T, lnK, ptr, idx, val, m, A, B, n, active, nc, nk, warm):
                 ptr,
                 idx,
                 val,
-                m,
                 A,
                 B,
                 n0,
@@ -493,6 +538,7 @@ def _inner(x, T, lnK, ptr, idx, val, m, A, B, n, active, nc, nk, warm):
                 nc,
                 nk,
                 300 if t == 0 else 100,
+                t == 0 and attempt == 0,
             )
             xs = x.copy()
             for k in range(nk):
