@@ -45,7 +45,7 @@ def cli() -> None:
 @click.option(
     "--time-limit",
     type=click.FloatRange(min=1.0, max=86400.0),
-    default=50.0,
+    default=35.0,
     show_default=True,
     metavar="SECONDS",
     help="Stop searching after this long.",
@@ -149,7 +149,7 @@ def verify(design: str, as_json: bool) -> int:
 @click.option(
     "--time-limit",
     type=click.FloatRange(min=1.0, max=86400.0),
-    default=50.0,
+    default=35.0,
     show_default=True,
     metavar="SECONDS",
     help="Stop searching after this long at each value.",

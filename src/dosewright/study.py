@@ -298,7 +298,7 @@ def sweep(
     vary: str,
     path: str | Path,
     *,
-    time_limit_s: float = 50.0,
+    time_limit_s: float = 35.0,
     workers: int | None = None,
     progress: Progress | None = None,
 ) -> Sweep:

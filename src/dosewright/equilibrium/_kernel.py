@@ -90,8 +90,10 @@ def _evaluate(x, lnK, ptr, idx, val, m):
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def _log_balances(x, T, base, ptr, idx, val, slope, c, nc, P, N, F):
-    """Fill amounts ``c``, the positive and negative terms ``P``, ``N`` of every balance and
-    ``F = ln(N/P)``; return the sum of squares of ``F``."""
+    """Fill the amounts ``c`` and every balance's terms; return the sum of squares of ``F``.
+
+    ``P`` and ``N`` are the positive and negative terms, ``F = ln(N/P)``.
+    """
     for j in range(nc):
         P[j] = max(-T[j], 1e-300)
         N[j] = max(T[j], 1e-300)
@@ -146,7 +148,7 @@ def _with_phases(lnK, ptr, idx, val, A, B, n0, tau, nc, nk):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _lower_start(x, T, base, ptr, idx, val, slope, nc):
+def _lower_start(x, T, base, ptr, idx, val, slope):
     """Lower a start until no species or phase holds more than its scarcest component allows.
 
     A sulfide e^40 times too much dominates the balances of metal, sulfide and protons alike, which
@@ -201,7 +203,7 @@ def _homotopy(x, T, lnK, ptr, idx, val, A, B, n0, tau, n, nc, nk, max_iter, fres
     JN = np.empty((nc, nc))
     M = np.empty((nc, nc))
     if fresh:
-        _lower_start(x, T, base, jptr, jidx, jval, jslope, nc)
+        _lower_start(x, T, base, jptr, jidx, jval, jslope)
     merit = _log_balances(x, T, base, jptr, jidx, jval, jslope, c, nc, P, N, F)
     convex_steps = 0
     worst = 0.0

@@ -42,6 +42,7 @@ LATTICE_SECONDS = 6.0  # for one proposal; the incumbent is as good a suggestion
 PROPOSALS = {1: 2, 2: 5}  # by number of stages
 PROPOSALS_LONGER = 2
 SEEDS = 3  # trains from which the search descends, of each round of proposals
+SECOND_LOOKS = 6  # neighbours polished again when none was better at a glance
 BATCH = max(2, os.cpu_count() or 1)  # neighbours polished side by side
 LATTICE_SHARE = 0.4  # of the time, for the short trains' programs
 SHORT = 2  # stages
@@ -140,7 +141,7 @@ class _Search:
 
 def _quick(known: tuple[np.ndarray, np.ndarray]) -> dict[str, Any]:
     """Options of a quick polish: few starts, near what is known."""
-    return {"known": known, "samples": 12, "starts": 3, "iterations": 25}
+    return {"known": known, "samples": 20, "starts": 4, "iterations": 25}
 
 
 def known_of(
@@ -186,7 +187,7 @@ def train_text(model: PlantModel, structure: Structure) -> str:
 def optimise(
     flowsheet: Flowsheet,
     *,
-    time_limit_s: float = 50.0,
+    time_limit_s: float = 35.0,
     seed: int = 1,
     progress: Progress | None = None,
 ) -> Design:
@@ -215,8 +216,8 @@ def optimise(
             flowsheet.source_name,
             [Fault("reagents", "no reagent is offered", "add at least one [reagents.<name>]")],
         )
-    began = time.monotonic()
     model = PlantModel.of(flowsheet)
+    began = time.monotonic()  # from here: the very first solve on a machine compiles the kernel
     say = progress or (lambda _text: None)
     say("titrating the feed for anchors")
     anchors = feed_anchors(model)
@@ -350,18 +351,34 @@ def _descend(search: _Search, seeds: list[Polished], stop: float) -> None:
                 for structure, origin in _neighbours(search.model, centre.structure)
                 if structure not in search.done
             ]
+            tried: list[Polished] = []
             for batch in batched(fresh, BATCH):
                 if time.monotonic() > stop:
                     return
                 results = [search.trimmed(r) for r in search.polish_all(batch)]
-                closer = [r for r in results if search.is_close(r, centre)]
-                earnest = [(r.structure, _earnest(search, r)) for r in closer]
-                results += search.polish_all(earnest) if earnest else []
-                for result in results:
-                    if ahead(result, centre, WORTH_MOVING):
-                        centre, moved = result, True
+                tried += results
+                centre, moved = _move(centre, results)
                 if moved:
                     break
+            if moved:
+                continue
+            # nothing better at a glance: the closest deserve a second look
+            close = sorted((r for r in tried if search.is_close(r, centre)), key=_merit)
+            for batch_of in batched(close[:SECOND_LOOKS], BATCH):
+                if time.monotonic() > stop:
+                    return
+                earnest = [(r.structure, _earnest(search, r)) for r in batch_of]
+                centre, better = _move(centre, search.polish_all(earnest))
+                moved = moved or better
+
+
+def _move(centre: Polished, results: Sequence[Polished]) -> tuple[Polished, bool]:
+    """Return the best of ``results`` that beats ``centre``, or ``centre`` itself."""
+    moved = False
+    for result in results:
+        if ahead(result, centre, WORTH_MOVING):
+            centre, moved = result, True
+    return centre, moved
 
 
 def _earnest(search: _Search, result: Polished) -> dict[str, Any]:

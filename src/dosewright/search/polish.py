@@ -431,7 +431,7 @@ def polish_structure(
     """Polish a structure from hints (coordinates and doses), samples and their neighbours.
 
     ``ln_activity`` (H, nc) are known liquors to draw starts from, the anchors' for instance;
-    ``known`` coordinates and doses to keep in the samples (see `sampled_starts`); ``shakes`` is the
+    ``known`` coordinates and doses to keep in half of the samples (see `sampled_starts`); ``shakes`` is the
     number of times the result is shaken in its doses and polished again.
     """
     problem = TrainProblem(model, structure)
@@ -442,11 +442,12 @@ def polish_structure(
     for u, dose in hints:
         u_rows.append(np.atleast_2d(u))
         dose_rows.append(np.atleast_2d(dose))
-    u_found, dose_found = sampled_starts(
-        problem, rng, samples, starts - len(hints), ln_activity, known
-    )
-    u_rows.append(u_found)
-    dose_rows.append(dose_found)
+    wanted = starts - len(hints)
+    for kept in (None,) if known is None else (known, None):
+        share = wanted if known is None else (wanted + (kept is not None)) // 2
+        u_found, dose_found = sampled_starts(problem, rng, samples, share, ln_activity, kept)
+        u_rows.append(u_found)
+        dose_rows.append(dose_found)
     u = np.concatenate(u_rows)
     doses = np.concatenate(dose_rows)
     if u.shape[0] == 0:
