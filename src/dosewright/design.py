@@ -65,8 +65,9 @@ class SearchRecord:
     trains_polished: different trains optimised on the exact model.
     lattice_proposals: of them, those proposed by the mixed-integer programs.
     lattice_value_USD_per_h: what the linear model promised for the best proposal; NaN when none.
-    lattice_difference: relative difference of the linear model, anchored on the design, from the
-        exact cost; NaN when it could not be compared.
+    lattice_difference: error of the linear model at the design, anchored on its stages and held near
+        its doses: its value less the exact cost, over the sum of the absolute cost lines; NaN when it
+        could not be compared.
     exact_evaluations: trains solved on the exact model in all.
     best_cost_USD_per_h: cost of the design, by the exact model.
     method: the way it was searched, in words.

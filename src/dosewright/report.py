@@ -93,8 +93,8 @@ def design_text(design: Design) -> str:
     )
     if record.lattice_difference == record.lattice_difference:
         page.line(
-            "The linear model, anchored on this design, differs from its exact cost by "
-            f"{100.0 * record.lattice_difference:+.1f} %."
+            "The linear model, anchored on this design, is off its exact cost by "
+            f"{100.0 * record.lattice_difference:+.1f} % of the sum of its cost lines."
         )
     page.line("Least cost is what this search found, not proven.")
     return page.text()

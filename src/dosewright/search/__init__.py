@@ -21,7 +21,7 @@ import numpy as np
 from dosewright.design import Design, SearchRecord
 from dosewright.errors import Fault, InputError
 from dosewright.flowsheet import Flowsheet
-from dosewright.plant import PlantModel, lead_coordinate
+from dosewright.plant import PlantModel, Run, lead_coordinate
 from dosewright.search.anchors import Anchors, anchors_of_run, feed_anchors, thinned
 from dosewright.search.lattice import Lattice, Proposal
 from dosewright.search.polish import (
@@ -32,7 +32,7 @@ from dosewright.search.polish import (
     ahead,
     polish_structure,
 )
-from dosewright.trial import decisions_of, evaluate_on
+from dosewright.trial import account, decisions_of, evaluate_on
 
 Progress = Callable[[str], None]
 T = TypeVar("T")
@@ -240,6 +240,7 @@ def optimise(
         iterations=120,
         shakes=6,
     )
+    _refine(search)
     return _design(search, _agreement(search))
 
 
@@ -398,36 +399,46 @@ def _lead_doses(search: _Search, result: Polished) -> np.ndarray:
     return np.array([result.dose_kg_per_h[k, problem.lead[k]] for k in problem.dosed])
 
 
-def _agreement(search: _Search) -> float:
-    """Relative difference of the lattice, re-anchored on the winner, from the exact cost.
+def _refine(search: _Search) -> None:
+    """Anchor the lattice on the winner as well, and polish the doses it then prefers."""
+    for _ in range(3):
+        best = search.best
+        if best is None or not best.feasible or search.time_left_s < 3.0:
+            return
+        joined = anchors_of_run(search.model, _run_of(search, best)).joined(search.anchors)
+        lattice = Lattice(search.model, joined, len(best.structure))
+        lattice.restrict(best.structure)
+        found = lattice.propose(min(5.0, search.time_left_s - 1.0))
+        hints = _hint(search.model, joined, found) if found is not None else []
+        if not hints:
+            return
+        search.polish(best.structure, starts=6, samples=16, hints=hints)
+        if search.best is best:
+            return
 
-    Where the re-anchored lattice points to other doses, they are polished as well, and the lattice
-    is anchored again on the result.
+
+def _run_of(search: _Search, result: Polished) -> Run:
+    problem = TrainProblem(search.model, result.structure)
+    return problem.run_doses(_lead_doses(search, result)[None, :])
+
+
+def _agreement(search: _Search) -> float:
+    """Error of the linear model at the design: lattice value less exact cost, over the turnover.
+
+    The lattice is anchored on the design's own stages and held to its structure, near its doses.
     """
     best = search.best
     if best is None or not best.feasible:
         return float("nan")
-    difference = float("nan")
-    for _ in range(3):
-        problem = TrainProblem(search.model, best.structure)
-        run = problem.run_doses(_lead_doses(search, best)[None, :])
-        joined = anchors_of_run(search.model, run).joined(search.anchors)
-        lattice = Lattice(search.model, joined, len(best.structure))
-        lattice.restrict(best.structure)
-        found = lattice.propose(min(6.0, max(search.time_left_s - 1.0, 1.0)))
-        if found is None:
-            return difference
-        difference = found.value_USD_per_h / best.cost_USD_per_h - 1.0
-        hints = _hint(search.model, joined, found)
-        if not hints or search.time_left_s < 3.0:
-            return difference
-        before = best
-        search.polish(best.structure, starts=6, samples=16, hints=hints)
-        best = search.best
-        if best is before:
-            return difference
-        assert best is not None
-    return difference
+    run = _run_of(search, best)
+    lattice = Lattice(search.model, anchors_of_run(search.model, run), len(best.structure))
+    lattice.restrict(best.structure, best.dose_kg_per_h)
+    found = lattice.propose(5.0)
+    if found is None:
+        return float("nan")
+    books = account(run, [step.destination for step in best.structure])
+    turnover = sum(abs(float(line.USD_per_h[0])) for line in books.costs)
+    return (found.value_USD_per_h - best.cost_USD_per_h) / turnover
 
 
 def _design(search: _Search, agreement: float) -> Design:

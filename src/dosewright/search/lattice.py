@@ -429,9 +429,21 @@ class Lattice:
 
     # -- use ----------------------------------------------------------------------------------
 
-    def restrict(self, structure: Structure) -> None:
-        """Fix every structural choice to ``structure``; anchors and doses stay free."""
+    def restrict(self, structure: Structure, dose_kg_per_h: Array | None = None) -> None:
+        """Fix every structural choice to ``structure``; anchors stay free.
+
+        Doses stay free too, unless ``dose_kg_per_h`` (K, R) is given: then within a tenth of it.
+        """
         m = self.program
+        if dose_kg_per_h is not None:
+            mmol = dose_kg_per_h * self.plant.reagent_rates[:, 0] * 1000.0 / self.water_kg
+            for k, step in enumerate(structure):
+                if step.reagent >= 0:
+                    amount = float(mmol[k, step.reagent])
+                    m.dose[k, step.reagent].setlb(0.9 * amount)
+                    m.dose[k, step.reagent].setub(1.1 * amount)
+            m.dose_worth.deactivate()
+            m.dose_on.deactivate()
         for k, step in enumerate(structure):
             for r in range(len(self.reagents)):
                 m.w[k, r].fix(1 if r == step.reagent else 0)
