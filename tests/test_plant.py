@@ -209,3 +209,17 @@ def test_equipment_is_tagged_and_streams_are_numbered_once():
     assert sorted(numbers) == list(range(1, len(numbers) + 1))
     assert graph.nodes["TK-201"]["unit"] == "mix"
     assert graph.nodes["cake 2"]["unit"] == "product"
+
+
+def test_a_metal_gone_to_the_last_trace_stays_positive_from_stage_to_stage():
+    # all but 1e-15 of the copper is sulfide after stage 1: rounding must not make the rest negative
+    trial = evaluate(
+        TESSALY,
+        stage(caustic=(None, 8.5)),
+        stage(sodium_hydrosulfide=0.3),
+        stage(caustic=0.1),
+        stage(caustic=0.1),
+    )
+    for row in trial.streams:
+        if row.kind == "liquor":
+            assert row.dissolved_mg_per_L["Cu+2"] > 0.0

@@ -780,7 +780,11 @@ def _stage(
     ks = system.solids_count
     phases = np.where(solved[:, None], states.phase_mol_per_kg, 0.0) * solvent[:, None]
     rates = model.reagent_rates
-    in_liquor = totals - phases @ system.A
+    # traces from their own molalities: the difference of totals and solids would drown them in
+    # rounding, and could leave them negative; protons, which have either sign, by difference
+    in_liquor = states.dissolved_mol_per_kg * solvent[:, None]
+    h = system.components.index("H+")
+    in_liquor[:, h] = totals[:, h] - phases @ system.A[:, h]
     water_left = water - phases @ system.A_water
     pulp = Stream(
         totals=np.where(solved[:, None], in_liquor, 0.0),
