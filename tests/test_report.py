@@ -25,7 +25,10 @@ def test_three_significant_figures_and_never_a_bare_zero(value, text):
     assert figure(value) == text
 
 
-@pytest.mark.parametrize(("value", "text"), [(1.234, "1.23"), (123.44, "123.4"), (1234.4, "1,234")])
+@pytest.mark.parametrize(
+    ("value", "text"),
+    [(1.234, "1.23"), (123.44, "123.4"), (1234.4, "1,234"), (0.001, "<0.01"), (0.0, "0.00")],
+)
 def test_money(value, text):
     assert money(value) == text
 

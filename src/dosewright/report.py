@@ -43,7 +43,16 @@ def _magnitude(value: float) -> int:
 def money(value: float) -> str:
     """Money with two decimals below a hundred, none above a thousand."""
     size = abs(value)
+    if 0.0 < size < 0.005:
+        return f"{'-' if value < 0 else ''}<0.01"
     return f"{value:,.2f}" if size < 100 else f"{value:,.1f}" if size < 1000 else f"{value:,.0f}"
+
+
+def tonnage(value_t_per_h: float) -> str:
+    """Mass flow in t/h, or in kg/h below a tenth of a tonne."""
+    if abs(value_t_per_h) >= 0.1:
+        return figure(value_t_per_h, "t/h")
+    return figure(1000.0 * value_t_per_h, "kg/h")
 
 
 class _Page:
@@ -160,7 +169,7 @@ def _train(page: _Page, trial: Trial) -> None:
     rows = []
     for stage in trial.stages:
         doses = [
-            (name, f"{figure(stage.doses_kg_per_m3[name])} kg/m3", f"{figure(kg / 1000.0)} t/h")
+            (name, f"{figure(stage.doses_kg_per_m3[name])} kg/m3", tonnage(kg / 1000.0))
             for name, kg in stage.doses_kg_per_h.items()
         ]
         if stage.oxidant:
@@ -168,7 +177,7 @@ def _train(page: _Page, trial: Trial) -> None:
             flow = trial.flowsheet.feed.flow_m3_per_h
             doses.insert(
                 0,
-                (stage.oxidant, f"{figure(kg / flow)} kg/m3", f"{figure(kg / 1000.0)} t/h")
+                (stage.oxidant, f"{figure(kg / flow)} kg/m3", tonnage(kg / 1000.0))
                 if kg > 0.0
                 else (stage.oxidant, "on", ""),
             )
@@ -266,7 +275,9 @@ def _costs(page: _Page, trial: Trial) -> None:
         (
             line.group,
             line.item,
-            f"{figure(line.quantity)} {line.quantity_unit}",
+            tonnage(line.quantity)
+            if line.quantity_unit == "t/h"
+            else figure(line.quantity, line.quantity_unit),
             line.price,
             money(line.USD_per_h),
             figure(line.USD_per_h / flow),
