@@ -70,6 +70,15 @@ def test_what_is_no_readable_file(kind, tmp_path, capsys):
         ({"stages": [{"oxidant": "ozone"}]}, "ozone"),
         ({"stages": [{"reagents": {"lime": {"pH": 7}}, "cake": "gold"}]}, "gold"),
         ({"stages": [{"reagents": {"lime": {"pH": 7}}}] * 6}, "6 stages"),
+        ({"stages": [{"reagents": ["lime"]}]}, "not a table"),
+        ({"stages": [{"oxidant": ["peroxide"]}]}, "no oxidant"),
+        ({"stages": [{"oxidant": "peroxide", "cake": {}}]}, "no destination"),
+        ({"stages": [{"oxidant": "peroxide", "cak": "waste"}]}, "did you mean cake"),
+        ({"stages": [{"reagents": {"lime": {"pH": 99}}}]}, "outside"),
+        ({"stages": [{"reagents": {"lime": {"dose_kg_per_m3": 1e9}}}]}, "outside"),
+        ({"stages": [{"reagents": {"lime": {"dose_kg_per_h": 10**400}}}]}, "number"),
+        ({"stages": [{"reagents": {3: {"pH": 7}}}]}, "no reagent"),
+        ([], "no stages"),
     ],
 )
 def test_decisions_that_do_not_fit_are_refused(decisions, word, tmp_path):

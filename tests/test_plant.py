@@ -214,7 +214,7 @@ def test_equipment_is_tagged_and_streams_are_numbered_once():
 def test_a_metal_gone_to_the_last_trace_stays_positive_from_stage_to_stage():
     # all but 1e-15 of the copper is sulfide after stage 1: rounding must not make the rest negative
     trial = evaluate(
-        TESSALY,
+        with_value(TESSALY, "plant.max_stages", 4),
         stage(caustic=(None, 8.5)),
         stage(sodium_hydrosulfide=0.3),
         stage(caustic=0.1),

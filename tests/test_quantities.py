@@ -31,6 +31,12 @@ from dosewright.quantities import QuantityError, parse, parse_concentration
         ("1.2 g/L", "dose", 1.2),
         ("3.36 t/d", "mass_flow", 140.0),
         ("1,200 mg/L", "mass_concentration", 1200.0),
+        ("1,234,567.5 ug/L", "mass_concentration", 1234.5675),
+        ("1 200 mg/L", "mass_concentration", 1200.0),
+        ("1.2e3 mg/L", "mass_concentration", 1200.0),
+        (".5e1 mg/L", "mass_concentration", 5.0),
+        ("12 m³/h", "flow", 12.0),
+        ("25 °C", "temperature", 25.0),
         ("500 mL", "volume", 0.5),
     ],
 )
@@ -54,12 +60,25 @@ def test_quantity_is_read(text, kind, value):
         ("9000 h/yr", "operating_time", "above"),
         ("400 degC", "temperature", "above"),
         ("5 USD", "price_per_mass", "dimension"),
+        ("1,5 mg/L", "mass_concentration", "thousands"),  # a decimal comma is not 15
+        ("0,500 mg/L", "mass_concentration", "thousands"),
+        ("1.200,5 mg/L", "mass_concentration", "thousands"),
+        ("5 10 mg/L", "mass_concentration", "not known"),  # nor two numbers 510
+        ("10-20 mg/L", "mass_concentration", "not known"),
+        ("100 %", "operating_time", "dimension"),  # hours a year have no dimension either
+        ("0 h/yr", "operating_time", "below"),
     ],
 )
 def test_bad_quantity_says_why_and_gives_an_example(text, kind, word):
     with pytest.raises(QuantityError, match=word) as error:
         parse(text, kind)
     assert "write for example" in str(error.value)
+
+
+@pytest.mark.parametrize("unit", ["USD/ton", "USD/tons"])
+def test_a_ton_is_asked_which(unit):
+    with pytest.raises(QuantityError, match="write t or short_ton"):
+        parse(f"190 {unit}", "price_per_mass")
 
 
 def assay(rows, **feed):
@@ -85,6 +104,9 @@ EQUAL = [
     ({"HS": "33.068 mg/L"}, {"HS": "32.06 mg/L as S"}),
     ({"CO3": "60.008 mg/L"}, {"CO3": "100.086 mg/L as CaCO3"}),
     ({"Zn": "310 mg/L"}, {"Zn": "310000 ug/L"}),
+    ({"Al": "26.982 mg/L"}, {"Al": "0.003 N"}),
+    ({"Na": "22.99 mg/L"}, {"Na": "1 mmol/L"}),
+    ({"Na": "2 mmol/L"}, {"Na": "100.086 mg/L as CaCO3"}),
 ]
 
 
@@ -108,5 +130,6 @@ def test_iron_label_counts_both_oxidation_states():
 
 
 def test_concentration_refuses_what_has_no_charge():
-    with pytest.raises(QuantityError, match="charge"):
-        parse_concentration("3 meq/L", 0, "NaCl")
+    for text in ("3 meq/L", "0.1 N"):
+        with pytest.raises(QuantityError, match="charge"):
+            parse_concentration(text, 0, "NaCl")

@@ -10,6 +10,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -30,7 +31,10 @@ class Fault:
 
 
 class InputError(DosewrightError):
-    """An input is wrong; every fault found is listed, one line each."""
+    """An input is wrong; every fault found is listed, one line each.
+
+    Control characters quoted from the input are shown escaped, so that a line stays a line.
+    """
 
     exit_code = 2
 
@@ -39,10 +43,20 @@ class InputError(DosewrightError):
         self.faults = tuple(faults)
         super().__init__(
             "\n".join(
-                f"{source}: {fault.where + ': ' if fault.where else ''}{fault.what}; {fault.remedy}"
+                _one_line(
+                    f"{source}: {fault.where + ': ' if fault.where else ''}"
+                    f"{fault.what}; {fault.remedy}"
+                )
                 for fault in self.faults
             )
         )
+
+
+_CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029]")
+
+
+def _one_line(text: str) -> str:
+    return _CONTROL.sub(lambda match: repr(match.group())[1:-1], text)
 
 
 class NotConverged(DosewrightError):
@@ -50,4 +64,8 @@ class NotConverged(DosewrightError):
 
 
 class NoDesign(DosewrightError):
-    """No train that meets every limit was found."""
+    """No train that meets every limit was found; ``nearest`` is the closest one tried, if any."""
+
+    def __init__(self, message: str, nearest: object | None = None) -> None:
+        self.nearest = nearest
+        super().__init__(message)

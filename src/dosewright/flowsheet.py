@@ -8,9 +8,8 @@ from __future__ import annotations
 
 import copy
 import difflib
-import math
 import tomllib
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -21,7 +20,7 @@ import numpy as np
 from dosewright.chemistry.catalogue import catalogue
 from dosewright.chemistry.formula import charge_of, elements_of, molar_mass_g_per_mol
 from dosewright.errors import Fault, InputError
-from dosewright.quantities import QuantityError, parse, parse_concentration, split_number
+from dosewright.quantities import KINDS, QuantityError, parse, parse_concentration, split_number
 
 FAMILIES = ("hydroxide", "basic_salt", "carbonate", "sulfide", "sulfate")
 MAX_STAGES = 5
@@ -246,13 +245,13 @@ class _Reading:
         if not isinstance(value, dict):
             self.fault(where, f"is {_kind(value)}, not a table", f"write [{where}] and its keys")
             return out
-        for key in value:
+        for key in map(str, value):
             if key not in keys:
                 close = difflib.get_close_matches(key, keys, 1)
                 hint = f"did you mean {close[0]}?" if close else f"known: {', '.join(keys)}"
                 self.fault(_join(where, key), "is not a key of this table", hint)
         for key, spec in keys.items():
-            if key in value:
+            if value.get(key) is not None:  # a saved document may hold null
                 out[key] = spec.read(self, _join(where, key), value[key])
             elif spec.required:
                 self.fault(_join(where, key), "is missing", "add it")
@@ -298,7 +297,7 @@ def _number(name: str) -> Reader:
                 f"write for example {where} = {low + 4:g}",
             )
             return None
-        if not low <= float(value) <= high:
+        if not low <= value <= high:
             r.fault(where, f"{value} is outside {low:g} to {high:g}", "correct it")
             return None
         return float(value)
@@ -359,8 +358,12 @@ def _label_names(r: _Reading, where: str, value: Any) -> tuple[str, ...]:
     names = _names(r, where, value)
     if not names and isinstance(value, list):
         r.fault(where, "names nothing", 'write for example ["Zn"]')
+    counted: set[str] = set()
     for name in names:
-        _check_label(r, where, name)
+        label = _check_label(r, where, name)
+        if label is not None and counted & set(label.components):
+            r.fault(where, f"counts '{name}' twice", "name each metal once")
+        counted |= set(label.components) if label is not None else set()
     return names
 
 
@@ -418,7 +421,8 @@ def _limits(r: _Reading, where: str, value: Any) -> tuple[LimitSpec, ...]:
         label = _check_label(r, path, name)
         if label is None:
             continue
-        charge = charge_of(next(iter(label.components)))
+        charges = {charge_of(c) for c in label.components}
+        charge = charges.pop() if len(charges) == 1 else 0
         try:
             amount, basis, unit = parse_concentration(entry, charge, name)
             grams = _basis_mass(basis, label) if basis else label.g_per_mol
@@ -448,10 +452,8 @@ def _basis_mass(basis: str, label: Label) -> float:
     """
     component = next(iter(label.components))
     own = elements_of(component)
-    if basis == "CaCO3" and component not in {"CO3-2", "Ca+2", "Mg+2"}:
-        return molar_mass_g_per_mol("CaCO3") / 2.0 * abs(charge_of(component))
     if basis == "CaCO3":
-        return molar_mass_g_per_mol("CaCO3")
+        return molar_mass_g_per_mol("CaCO3") / 2.0 * abs(charge_of(component))
     other = elements_of(basis)
     shared = [e for e in other if e in own and e not in {"H", "O"}] or [
         e for e in other if e in own
@@ -597,7 +599,7 @@ def read_toml(path: str | Path) -> dict[str, Any]:
     """
     file = Path(path)
     try:
-        text = file.read_bytes().decode("utf-8")
+        text = file.read_bytes().decode("utf-8-sig")  # some editors put a mark in front
         document = tomllib.loads(text)
     except FileNotFoundError as error:
         raise InputError(
@@ -616,6 +618,10 @@ def read_toml(path: str | Path) -> dict[str, Any]:
     except tomllib.TOMLDecodeError as error:
         raise InputError(
             str(path), [Fault("", f"is no valid TOML: {error}", "correct the line named")]
+        ) from error
+    except (RecursionError, ValueError) as error:  # nested too deep; a number of too many digits
+        raise InputError(
+            str(path), [Fault("", "is TOML beyond any flowsheet", "shorten its lists and numbers")]
         ) from error
     return document
 
@@ -646,6 +652,8 @@ def from_document(document: Mapping[str, Any], source_name: str) -> Flowsheet:
         else dict(_NO_EFFLUENT)
     )
     solids = r.table("solids", top["solids"], _KEYS["solids"])
+    for name in sorted(set(solids["allow"]) & set(solids["forbid"])):
+        r.fault("solids.forbid", f"'{name}' is allowed as well", "take it out of one of the lists")
     disposal = prices["disposal"] or {}
     waste_class = waste["class"] or next(iter(disposal), "plain")
     if not disposal:
@@ -741,8 +749,10 @@ def _read_assay(
             r.fault(where, "is per mass of liquor", "give feed.specific_gravity, or write mg/L")
             return
         amount *= gravity
-    mol = amount if unit == "mol/L" else amount / grams
-    assay[component] = assay.get(component, 0.0) + mol
+    if component in assay:
+        r.fault(where, f"gives {component} a second time", "take one of the two out")
+        return
+    assay[component] = amount if unit == "mol/L" else amount / grams
 
 
 def _read_plant(r: _Reading, value: Any) -> Plant | None:
@@ -762,7 +772,7 @@ def _tables(r: _Reading, where: str, value: Any) -> Iterable[tuple[str, Any]]:
     if not isinstance(value, dict):
         r.fault(where, f"is {_kind(value)}, not a table", f'write [{where}."name"] tables')
         return ()
-    return value.items()
+    return [(str(name), entry) for name, entry in value.items()]
 
 
 def _read_reagents(r: _Reading, value: Any) -> dict[str, Reagent]:
@@ -941,8 +951,8 @@ def read_dose(text: Any) -> dict[str, float] | str:
 def decompose(formula: str) -> tuple[dict[str, float], float] | str:
     """Write a compound over components and H2O; return what is wrong as text.
 
-    The ions are found by their elements: every element other than H and O must come from one
-    component, O and H are then made up with H2O and H+.
+    Every element other than H and O must come from a component; O and H are then made up with H2O
+    and H+. Where an element has components of several oxidation states, neutrality decides.
     """
     try:
         wanted = elements_of(formula)
@@ -950,66 +960,66 @@ def decompose(formula: str) -> tuple[dict[str, float], float] | str:
         return str(error)
     if charge_of(formula):
         return f"'{formula}' carries a charge"
-    components = catalogue().components
-    left = dict(wanted)
-    out: dict[str, float] = {}
-    # ions that claim several elements first: SO4 before S, CO3, NO3, NH4
-    for ion in ("SO4-2", "CO3-2", "NO3-", "NH4+"):
-        key = next(e for e in elements_of(ion) if e not in {"O", "H"})
-        have, need = left.get(key, 0.0), elements_of(ion)[key]
-        oxygen = elements_of(ion).get("O", 0.0)
-        enough = left.get("O", 0.0) >= oxygen * have - 1e-9
-        if ion == "CO3-2":
-            enough = have > 0.0 and left.get("O", 0.0) > 0.0
-        if ion == "NH4+":
-            enough = have > 0.0
-        if have <= 0.0 or not enough:
-            continue
-        amount = have / need
-        out[ion] = amount
-        for element, count in elements_of(ion).items():
-            left[element] = left.get(element, 0.0) - amount * count
-    by_element: dict[str, list[str]] = {}
-    for name, record in components.items():
-        elements = [e for e in record.elements if e not in {"H", "O"}]
-        if (
-            name not in out
-            and len(elements) == 1
-            and not {"O"} & set(record.elements)
-            and (name not in {"NH4+"})
-        ):
-            by_element.setdefault(elements[0], []).append(name)
-    choices: list[tuple[str, float]] = []
-    open_iron = 0.0
-    for element, count in left.items():
-        if element in {"H", "O"} or abs(count) < 1e-9:
-            continue
-        names = by_element.get(element, [])
-        if not names or count < 0.0:
+    carried = {e for c in catalogue().components.values() for e in c.elements} | {"O", "H"}
+    for element in wanted:
+        if element not in carried:
             return f"'{formula}' holds {element}, which no component can carry"
-        if len(names) > 1:
-            open_iron = count
-        else:
-            choices.append((names[0], count))
-    for name, count in choices:
-        out[name] = count
-        for element, n in elements_of(name).items():
-            left[element] = left.get(element, 0.0) - n * count
-    water = left.get("O", 0.0)
-    protons = left.get("H", 0.0) - 2.0 * water
-    charge = sum(charge_of(c) * n for c, n in out.items())
-    if open_iron:
-        # the charge says how much of the iron is ferric
-        ferric = -(charge + protons) - 2.0 * open_iron
-        if ferric < -1e-9 or ferric > open_iron + 1e-9:
-            return f"'{formula}' cannot be neutral with Fe(II) and Fe(III)"
-        out["Fe+2"], out["Fe+3"] = open_iron - ferric, ferric
-        charge = -protons
-    if not math.isclose(charge + protons, 0.0, abs_tol=1e-9):
-        return f"'{formula}' is not neutral over the components known here"
-    if abs(protons) > 1e-12:
-        out["H+"] = protons
-    return {k: v for k, v in out.items() if abs(v) > 1e-12}, water
+    if not any(wanted.values()):
+        return f"'{formula}' holds no atoms"
+    if max(wanted.values()) > _MOST_ATOMS:
+        return f"'{formula}' counts more than {_MOST_ATOMS} atoms of an element"
+    for ions in _ion_choices(wanted):
+        found = _made_neutral(wanted, ions)
+        if found is not None:
+            return found
+    return f"'{formula}' is not neutral over the components known here"
+
+
+_MOST_ATOMS = 1000
+
+
+def _ion_choices(wanted: Mapping[str, float]) -> Iterator[dict[str, float]]:
+    """Yield the ions an element count may stand for, iron left out, likeliest first.
+
+    Sulfur is all sulfate or all sulfide, which keeps thiosulfate and its like out; nitrate never
+    stands beside sulfide. Oxoanions must find their oxygen in the formula, but for one atom of
+    carbonate, which carbon dioxide takes from water.
+    """
+    fixed: dict[str, float] = {}
+    for name, record in catalogue().components.items():
+        element = next((e for e in record.elements if e not in {"H", "O"}), None)
+        if element is not None and element in wanted and element not in {"S", "N", "Fe"}:
+            fixed[name] = wanted[element]
+    sulfur, nitrogen = wanted.get("S", 0.0), wanted.get("N", 0.0)
+    for sulfates in dict.fromkeys((sulfur, 0.0)):
+        sulfides = sulfur - sulfates
+        for nitrates in range(1 if sulfides else int(nitrogen) + 1):
+            ions = {"SO4-2": sulfates, "HS-": sulfides, "NO3-": float(nitrates),
+                    "NH4+": nitrogen - nitrates}  # fmt: skip
+            oxygen = 4.0 * sulfates + 3.0 * nitrates + 2.0 * fixed.get("CO3-2", 0.0)
+            if oxygen <= wanted.get("O", 0.0):
+                yield ions | fixed
+
+
+def _made_neutral(
+    wanted: Mapping[str, float], ions: Mapping[str, float]
+) -> tuple[dict[str, float], float] | None:
+    """Add H2O, H+ and iron to the ions, its Fe(III) share by charge; None when that cannot be."""
+    components = catalogue().components
+
+    def left(element: str) -> float:
+        held = sum(n * components[c].elements.get(element, 0.0) for c, n in ions.items())
+        return wanted.get(element, 0.0) - held
+
+    water = left("O")
+    protons = left("H") - 2.0 * water
+    iron = wanted.get("Fe", 0.0)
+    charge = sum(components[c].charge * n for c, n in ions.items()) + protons + 2.0 * iron
+    ferric = -charge
+    if not -1e-9 <= ferric <= iron + 1e-9:
+        return None
+    out = {**ions, "Fe+2": iron - ferric, "Fe+3": ferric, "H+": protons}
+    return {c: n for c, n in out.items() if abs(n) > 1e-9}, water
 
 
 # ---------------------------------------------------------------------------------------------
@@ -1018,6 +1028,8 @@ def decompose(formula: str) -> tuple[dict[str, float], float] | str:
 
 def check_decisions(flowsheet: Flowsheet, decisions: Mapping[str, Any]) -> None:
     """Refuse decisions that do not fit the flowsheet.
+
+    ``plant.max_stages`` bounds the optimiser only: a train of the user's own may be longer.
 
     Raises
     ------
@@ -1028,55 +1040,70 @@ def check_decisions(flowsheet: Flowsheet, decisions: Mapping[str, Any]) -> None:
     stages = decisions.get("stages") if isinstance(decisions, Mapping) else None
     if not isinstance(stages, list) or not stages:
         r.fault("train", "holds no stages", "give at least one stage")
-        r.finish()
-        return
+        stages = []
     if len(stages) > MAX_STAGES:
         r.fault("train", f"has {len(stages)} stages", f"give at most {MAX_STAGES}")
-    places = ["waste", *(p.name for p in flowsheet.products)]
     for number, stage in enumerate(stages, start=1):
         where = f"train[{number}]"
-        if not isinstance(stage, Mapping):
+        if isinstance(stage, Mapping):
+            _check_stage(r, flowsheet, where, stage)
+        else:
             r.fault(where, "is no table", "give reagents, oxidant and cake")
-            continue
-        reagents = stage.get("reagents") or {}
-        setpoints = 0
-        for name, dose in reagents.items():
-            path = f"{where}.reagents.{name}"
-            if name not in flowsheet.reagents:
-                _unknown(r, path, "reagent", name, flowsheet.reagents)
-                continue
-            if not isinstance(dose, Mapping) or len(dose) != 1 or not set(dose) <= {
-                "pH", "dose_kg_per_m3", "dose_kg_per_h",
-            }:  # fmt: skip
-                r.fault(path, "is no dose", 'give {"dose_kg_per_m3": 1.2} or {"pH": 6.0}')
-                continue
-            value = next(iter(dose.values()))
-            if (
-                isinstance(value, bool)
-                or not isinstance(value, int | float | np.floating)
-                or not (math.isfinite(value))
-            ):
-                r.fault(path, f"{value!r} is no number", "give a number")
-            elif "pH" in dose:
-                setpoints += 1
-            elif value < 0.0:
-                r.fault(path, f"{value:g} is negative", "give a dose of zero or more")
-        if setpoints > 1:
-            r.fault(f"{where}.reagents", "sets the pH twice", "let one reagent set the pH")
-        agent = stage.get("oxidant")
-        if agent is not None and agent not in flowsheet.oxidants:
-            _unknown(r, f"{where}.oxidant", "oxidant", str(agent), flowsheet.oxidants)
-        if not reagents and agent is None:
-            r.fault(where, "adds nothing", "give a reagent or an oxidant, or take the stage out")
-        cake = stage.get("cake", "waste")
-        if cake not in places:
-            _unknown(r, f"{where}.cake", "destination", str(cake), places)
     r.finish()
 
 
-def _unknown(r: _Reading, where: str, what: str, name: str, known: Iterable[str]) -> None:
+def _check_stage(r: _Reading, flowsheet: Flowsheet, where: str, stage: Mapping[str, Any]) -> None:
+    for key in stage:
+        if key not in _KEYS["train"]:
+            _unknown(r, f"{where}.{key}", "key", key, _KEYS["train"])
+    reagents = stage.get("reagents") or {}
+    if not isinstance(reagents, Mapping):
+        r.fault(f"{where}.reagents", f"is {_kind(reagents)}, not a table", _DOSE_HINT)
+        return
+    for name, dose in reagents.items():
+        path = f"{where}.reagents.{name}"
+        if name not in flowsheet.reagents:
+            _unknown(r, path, "reagent", name, flowsheet.reagents)
+        else:
+            _check_dose(r, path, dose)
+    if sum(isinstance(dose, Mapping) and "pH" in dose for dose in reagents.values()) > 1:
+        r.fault(f"{where}.reagents", "sets the pH twice", "let one reagent set the pH")
+    agent, cake = stage.get("oxidant"), stage.get("cake", "waste")
+    if agent is not None and agent not in [*flowsheet.oxidants]:
+        _unknown(r, f"{where}.oxidant", "oxidant", agent, flowsheet.oxidants)
+    if not reagents and agent is None:
+        r.fault(where, "adds nothing", "give a reagent or an oxidant, or take the stage out")
+    places = ["waste", *(p.name for p in flowsheet.products)]
+    if cake not in places:
+        _unknown(r, f"{where}.cake", "destination", cake, places)
+
+
+_DOSE_RANGES = {
+    "pH": _RANGES["pH"],
+    "dose_kg_per_m3": (KINDS["dose"].low, KINDS["dose"].high),
+    "dose_kg_per_h": (KINDS["mass_flow"].low, KINDS["mass_flow"].high),
+}
+_DOSE_HINT = 'give {"dose_kg_per_m3": 1.2}, {"dose_kg_per_h": 140.0} or {"pH": 6.0}'
+
+
+def _check_dose(r: _Reading, path: str, dose: Any) -> None:
+    if not isinstance(dose, Mapping) or len(dose) != 1 or not set(dose) <= set(_DOSE_RANGES):
+        r.fault(path, "is no dose", _DOSE_HINT)
+        return
+    ((kind, value),) = dose.items()
+    number = isinstance(value, int | float | np.floating) and not isinstance(value, bool)
+    if not number or not abs(value) < 1e300:  # NaN is not below it either
+        r.fault(path, f"{value!r} is no number", "give a number")
+        return
+    low, high = _DOSE_RANGES[kind]
+    if not low <= value <= high:
+        fault = "negative" if kind != "pH" and value < 0.0 else f"outside {low:g} to {high:g}"
+        r.fault(path, f"{kind} = {value:g} is {fault}", "correct it")
+
+
+def _unknown(r: _Reading, where: str, what: str, name: Any, known: Iterable[str]) -> None:
     names = list(known)
-    close = difflib.get_close_matches(name, names, 1)
+    close = difflib.get_close_matches(str(name), names, 1)
     hint = f"did you mean {close[0]}?" if close else f"known: {', '.join(names) or 'none'}"
     r.fault(where, f"no {what} '{name}'", hint)
 
@@ -1112,10 +1139,13 @@ def value_at(flowsheet: Flowsheet, key: str) -> Any:
 def _locate(flowsheet: Flowsheet, document: Any, key: str) -> tuple[Any, Any]:
     node: Any = document
     steps: list[str | int] = []
+    wording: list[str] = []
     for part in _split_path(key):
         name, _, index = part.partition("[")
         steps.append(name)
+        wording.append(name)
         if index:
+            wording.append(f"[{index}")
             number = index.rstrip("]")
             steps.append(int(number) - 1 if number.isdigit() else -1)
     for depth, step in enumerate(steps):
@@ -1126,8 +1156,11 @@ def _locate(flowsheet: Flowsheet, document: Any, key: str) -> tuple[Any, Any]:
         )
         if not inside:
             names = [str(k) for k in node] if isinstance(node, dict) else []
+            if isinstance(node, list):
+                names = [f"[{k}]" for k in range(1, len(node) + 1)]
             r = _Reading(flowsheet.source_name)
-            _unknown(r, key, "key", str(step), names)
+            what = "entry" if isinstance(node, list) else "key"
+            _unknown(r, key, what, wording[depth], names)
             r.finish()
         if depth < len(steps) - 1:
             node = node[step]
@@ -1166,7 +1199,8 @@ def train_graph(flowsheet: Flowsheet, stages: int, destinations: Iterable[str] =
     """Return the graph of a train of ``stages`` mixing and settling units.
 
     Nodes carry ``unit`` (a key of `UNIT_TYPES`), ``stage`` and a trade-style ``tag``; edges carry a
-    ``stream`` number and a ``kind``: liquor, reagent, pulp, cake or gas.
+    ``stream`` number and a ``kind``: liquor, pulp or cake. Reagents, their water and vented gas enter
+    and leave at the mixing tanks; they are reported with the stage.
     """
     graph = nx.DiGraph(title=flowsheet.title)
     places = [*destinations, *["waste"] * stages][:stages]
@@ -1186,4 +1220,34 @@ def train_graph(flowsheet: Flowsheet, stages: int, destinations: Iterable[str] =
         previous = settler
     graph.add_node("effluent", unit="effluent", stage=stages, tag="EFF")
     graph.add_edge(previous, "effluent", stream=number, kind="liquor")
+    return graph
+
+
+def superstructure(flowsheet: Flowsheet) -> nx.DiGraph:
+    """Return the graph of every choice: all positions, any end, any destination of each cake.
+
+    Nodes and edges carry what those of `train_graph` do; a mixing tank also names the ``reagents``
+    and ``oxidants`` it may be given. A train of ``n`` stages is the part whose ``n``-th overflow is
+    the effluent, with one cake edge kept for each settler.
+    """
+    graph = nx.DiGraph(title=flowsheet.title)
+    positions = flowsheet.plant.max_stages
+    graph.add_node("feed", unit="feed", stage=0, tag="FEED")
+    graph.add_node("waste", unit="waste", stage=0, tag="waste")
+    for product in flowsheet.products:
+        graph.add_node(product.name, unit="product", stage=0, tag=product.name)
+    graph.add_node("effluent", unit="effluent", stage=positions, tag="EFF")
+    edges: list[tuple[str, str, str]] = []
+    previous = "feed"
+    for k in range(1, positions + 1):
+        tank, settler = f"TK-{k}01", f"TH-{k}01"
+        may = {"reagents": tuple(flowsheet.reagents), "oxidants": tuple(flowsheet.oxidants)}
+        graph.add_node(tank, unit="mix", stage=k, tag=tank, **may)
+        graph.add_node(settler, unit="settle", stage=k, tag=settler)
+        edges += [(previous, tank, "liquor"), (tank, settler, "pulp"), (settler, "waste", "cake")]
+        edges += [(settler, product.name, "cake") for product in flowsheet.products]
+        edges.append((settler, "effluent", "liquor"))
+        previous = settler
+    for number, (start, end, kind) in enumerate(edges, start=1):
+        graph.add_edge(start, end, stream=number, kind=kind)
     return graph

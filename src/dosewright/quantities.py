@@ -26,7 +26,7 @@ class Kind:
 #: every kind of quantity a file or a command can hold
 KINDS: dict[str, Kind] = {
     "flow": Kind("m**3/hour", "120 m3/h", 1e-9),
-    "operating_time": Kind("hour/year", "8400 h/yr", 0.0, 8785.0),
+    "operating_time": Kind("hour/year", "8400 h/yr", 1.0, 8785.0),
     "temperature": Kind("degC", "25 degC", 0.0, 100.0),
     "mass_concentration": Kind("mg/L", "310 mg/L", 0.0, 1e6),
     "price_per_mass": Kind("USD/t", "190 USD/t"),
@@ -60,10 +60,14 @@ def _registry() -> Any:
     return registry
 
 
+# separators group thousands or the number ends there: "1,5" must not become 15
 _LEADING = re.compile(
-    r"^\s*([+-]?(?:\d[\d,_ ]*\d|\d)(?:\.\d*)?(?:[eE][+-]?\d+)?|[+-]?\.\d+)\s*(.*)$"
+    r"^\s*([+-]?(?:(?:[1-9]\d{0,2}(?:[,_ ]\d{3})+(?!\d)|\d+)(?:\.\d*)?|\.\d+)(?:[eE][+-]?\d+)?)\s*(.*)$",
+    re.ASCII | re.DOTALL,
 )
 _POWER = re.compile(r"(?<=[a-zA-Z])([23])\b")
+_SHARE = re.compile(r"%|\bpercent\b|\bpp[mb]\b")
+_TON = re.compile(r"\btons?\b")
 _YEAR = re.compile(r"\b(y|year)\b")
 
 
@@ -79,6 +83,8 @@ def split_number(text: str) -> tuple[float, str]:
     if match is None:
         raise QuantityError(f"'{text}' does not begin with a number")
     number, rest = match.groups()
+    if rest[:1] in {",", "_"}:
+        raise QuantityError(f"'{text}' holds a '{rest[0]}' that groups no thousands")
     value = float(re.sub(r"[,_ ]", "", number))
     return value, rest.strip()
 
@@ -128,7 +134,11 @@ def _convert(value: float, unit: str, target: str, text: str, hint: str) -> floa
     registry = _registry()
     clean = _YEAR.sub("yr", _POWER.sub(r"**\1", unit.replace("µ", "u").replace("μ", "u")))
     clean = clean.replace("°C", "degC")
-    if re.search(r"[^\w*/^.() %$-]", clean):
+    if _TON.search(clean):
+        raise QuantityError(f"'{text}': a ton may be 1000 kg or 907 kg: write t or short_ton")
+    if _SHARE.search(clean):
+        raise QuantityError(f"'{text}' has the wrong dimension: {hint}")
+    if re.search(r"[^\w*/^.() $-]", clean):
         raise QuantityError(f"'{text}': the unit '{unit}' is not known: {hint}")
     try:
         if target == "degC":
@@ -144,7 +154,7 @@ _AS = re.compile(r"^(.*?)\s+as\s+(\S+)$")
 
 
 def parse_concentration(text: object, charge: int, name: str) -> tuple[float, str | None, str]:
-    """Read an amount of ``name`` per litre.
+    """Read an amount of ``name`` per litre; ``charge`` is 0 where no one charge is meant.
 
     Returns (number, basis formula or None, unit class): the class is ``"mol/L"`` when the number is
     already mol of ``name`` per litre, ``"g/L"`` when it is grams of the basis (``name`` itself when
@@ -172,15 +182,15 @@ def parse_concentration(text: object, charge: int, name: str) -> tuple[float, st
     if unit in {"ppm", "mg/kg", "g/kg", "ug/kg", "ppb"}:
         per_kg = {"ppm": 1e-3, "mg/kg": 1e-3, "g/kg": 1.0, "ug/kg": 1e-6, "ppb": 1e-6}[unit]
         return value * per_kg, basis, "g/kg"
-    if re.fullmatch(r"[mu]?eq/(L|l|m3)", unit):
-        scale = {"m": 1e-3, "u": 1e-6}.get(unit[0], 1.0) if not unit.startswith("eq") else 1.0
+    if unit == "N" or re.fullmatch(r"[mu]?eq/(L|l|m3)", unit):
+        scale = {"m": 1e-3, "u": 1e-6}.get(unit[0], 1.0)
         scale *= 1e-3 if unit.endswith("m3") else 1.0
         if charge == 0:
-            raise QuantityError(f"'{text}': {name} has no charge to count equivalents by: {hint}")
+            raise QuantityError(
+                f"'{text}': {name} has no one charge to count equivalents by: {hint}"
+            )
         return value * scale / abs(charge), None, "mol/L"
-    if re.fullmatch(r"[mun]?mol/(L|l|m3|dm3)", unit) or unit in {"M", "mM", "N"}:
-        if unit == "N":
-            return value / max(abs(charge), 1), None, "mol/L"
+    if re.fullmatch(r"[mun]?mol/(L|l|m3|dm3)", unit) or unit in {"M", "mM"}:
         unit = {"M": "mol/L", "mM": "mmol/L"}.get(unit, unit)
         return _convert(value, unit, "mol/L", text, hint), None, "mol/L"
     return _convert(value, unit, "g/L", text, hint), basis, "g/L"
