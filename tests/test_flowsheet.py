@@ -20,7 +20,6 @@ from dosewright.flowsheet import (
     find_label,
     from_document,
     load,
-    superstructure,
     train_graph,
     value_at,
     with_value,
@@ -323,22 +322,3 @@ def test_train_graph(stages, every_key):
     line = nx.shortest_path(graph, "feed", "effluent")
     assert len(line) == 2 + 2 * stages
     assert nx.is_directed_acyclic_graph(graph)
-
-
-def test_superstructure_holds_every_train(every_key):
-    whole = superstructure(every_key)
-    positions = every_key.plant.max_stages
-    assert nx.is_directed_acyclic_graph(whole)
-    assert set(nx.get_node_attributes(whole, "unit").values()) == set(UNIT_TYPES)
-    numbers = list(nx.get_edge_attributes(whole, "stream").values())
-    assert sorted(numbers) == list(range(1, whole.number_of_edges() + 1))
-    assert whole.nodes["TK-101"]["reagents"] == ("hydrated lime", "caustic")
-    assert whole.nodes["TK-201"]["oxidants"] == ("peroxide", "air")
-    for stages in range(1, positions + 1):
-        for place in ("waste", "copper cake"):
-            train = train_graph(every_key, stages, [place] * stages)
-            for start, end, data in train.edges(data=True):
-                target = place if data["kind"] == "cake" else end
-                assert whole.edges[start, target]["kind"] == data["kind"]
-    trains = list(nx.all_simple_paths(whole, "feed", "effluent"))
-    assert sorted(len(path) for path in trains) == [2 + 2 * n for n in range(1, positions + 1)]

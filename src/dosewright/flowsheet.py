@@ -1221,33 +1221,3 @@ def train_graph(flowsheet: Flowsheet, stages: int, destinations: Iterable[str] =
     graph.add_node("effluent", unit="effluent", stage=stages, tag="EFF")
     graph.add_edge(previous, "effluent", stream=number, kind="liquor")
     return graph
-
-
-def superstructure(flowsheet: Flowsheet) -> nx.DiGraph:
-    """Return the graph of every choice: all positions, any end, any destination of each cake.
-
-    Nodes and edges carry what those of `train_graph` do; a mixing tank also names the ``reagents``
-    and ``oxidants`` it may be given. A train of ``n`` stages is the part whose ``n``-th overflow is
-    the effluent, with one cake edge kept for each settler.
-    """
-    graph = nx.DiGraph(title=flowsheet.title)
-    positions = flowsheet.plant.max_stages
-    graph.add_node("feed", unit="feed", stage=0, tag="FEED")
-    graph.add_node("waste", unit="waste", stage=0, tag="waste")
-    for product in flowsheet.products:
-        graph.add_node(product.name, unit="product", stage=0, tag=product.name)
-    graph.add_node("effluent", unit="effluent", stage=positions, tag="EFF")
-    edges: list[tuple[str, str, str]] = []
-    previous = "feed"
-    for k in range(1, positions + 1):
-        tank, settler = f"TK-{k}01", f"TH-{k}01"
-        may = {"reagents": tuple(flowsheet.reagents), "oxidants": tuple(flowsheet.oxidants)}
-        graph.add_node(tank, unit="mix", stage=k, tag=tank, **may)
-        graph.add_node(settler, unit="settle", stage=k, tag=settler)
-        edges += [(previous, tank, "liquor"), (tank, settler, "pulp"), (settler, "waste", "cake")]
-        edges += [(settler, product.name, "cake") for product in flowsheet.products]
-        edges.append((settler, "effluent", "liquor"))
-        previous = settler
-    for number, (start, end, kind) in enumerate(edges, start=1):
-        graph.add_edge(start, end, stream=number, kind=kind)
-    return graph
