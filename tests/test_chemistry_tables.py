@@ -1,5 +1,8 @@
 """The shipped constants: every reaction balances, every row says where it comes from."""
 
+import importlib
+from importlib import resources
+
 import pytest
 
 from dosewright.chemistry import catalogue
@@ -9,6 +12,9 @@ from dosewright.chemistry.formula import (
     elements_of,
     molar_mass_g_per_mol,
 )
+
+# the package exports a function of the same name as the module
+catalogue_module = importlib.import_module("dosewright.chemistry.catalogue")
 
 DATA = catalogue()
 REACTIONS = [*DATA.species.values(), *DATA.solids.values(), *DATA.gases.values()]
@@ -87,6 +93,65 @@ def test_carbonate_constants_follow_their_published_functions(temperature_C):
     assert at(DATA.solids["calcite"], temperature_C) == pytest.approx(calcite, abs=0.006)
 
 
+def dH(record):
+    return record.dH_kJ_per_mol
+
+
+PROTONIC = [
+    record
+    for record in [*DATA.species.values(), *DATA.solids.values(), *DATA.gases.values()]
+    if record.components.get("H+", 0.0) != 0.0 and getattr(record, "forms", "fast") == "fast"
+]
+
+
+@pytest.mark.parametrize("record", PROTONIC, ids=lambda r: r.name)
+def test_reactions_with_protons_carry_an_enthalpy(record):
+    # water's own constant moves 0.33 per 10 K: a proton reaction held constant in T would make
+    # residuals wrong a hundredfold between 5 and 60 C
+    assert dH(record) is not None
+
+
+@pytest.mark.parametrize(
+    ("solid", "neutral"),
+    [
+        ("Zn(OH)2(s)", "Zn(OH)2"),
+        ("Cu(OH)2(s)", "Cu(OH)2"),
+        ("Ni(OH)2(fresh)", "Ni(OH)2"),
+        ("Fe(OH)2(s)", "Fe(OH)2"),
+        ("Al(OH)3(am)", "Al(OH)3"),
+        ("Fe(OH)3(am)", "Fe(OH)3"),
+    ],
+)
+def test_neutral_hydroxide_floor_moves_little_with_temperature(solid, neutral):
+    # dissolving without a change of charge takes up some heat: 0 to 80 kJ/mol
+    floor = dH(DATA.solids[solid]) + dH(DATA.species[neutral])
+    assert 0.0 < floor < 80.0
+
+
+@pytest.mark.parametrize(
+    ("name", "bound", "kJ_per_mol"),
+    [("Cu(NH3)4+2", 4, -92.0), ("Ni(NH3)6+2", 6, -97.0), ("Zn(NH3)4+2", 4, -60.0)],
+)
+def test_heat_of_binding_ammonia(name, bound, kJ_per_mol):
+    # Smith and Martell, Critical Stability Constants 4 (memory)
+    heat = dH(DATA.species[name]) - bound * dH(DATA.species["NH3"])
+    assert heat == pytest.approx(kJ_per_mol, abs=5.0)
+
+
+def test_basic_zinc_sulfate_keeps_its_place_beside_the_hydroxide():
+    # Zn4(OH)6SO4:4H2O + 2 OH- = 4 Zn(OH)2 + SO4-2 + 4 H2O: no proton, little heat, so the sulfate
+    # at which one turns into the other moves by less than a decade between 10 and 40 C
+    def exchange(temperature_C):
+        at = DATA.log10_K_at
+        return (
+            at(DATA.solids["Zn4(OH)6SO4:4H2O(s)"], temperature_C)
+            - 4.0 * at(DATA.solids["Zn(OH)2(s)"], temperature_C)
+            - 2.0 * at(DATA.species["OH-"], temperature_C)
+        )
+
+    assert abs(exchange(40.0) - exchange(10.0)) < 1.0
+
+
 @pytest.mark.parametrize(
     ("formula", "elements"),
     [
@@ -100,10 +165,58 @@ def test_formula_is_counted(formula, elements):
     assert elements_of(formula) == elements
 
 
-@pytest.mark.parametrize("formula", ["Ca(", "Ca)OH", "Xx2O", "ca", "H2O)", ":H2O", "Ca+OH"])
+def test_decimal_water_of_crystallisation_is_counted():
+    assert elements_of("NiCO3:5.5H2O") == {"Ni": 1, "C": 1, "O": 8.5, "H": 11}
+
+
+@pytest.mark.parametrize(
+    "formula",
+    ["Ca(", "Ca)OH", "Xx2O", "ca", "H2O)", ":H2O", "Ca+OH", "FeSO4.7H2O", "Ca()2", "Fe0", ""],
+)
 def test_what_is_no_formula_is_refused_with_its_position(formula):
     with pytest.raises(ValueError, match="formula"):
         elements_of(formula)
+
+
+def test_dot_before_water_is_refused_with_its_remedy():
+    with pytest.raises(ValueError, match="write ':' before water"):
+        elements_of("FeSO4.7H2O")
+
+
+def test_charge_is_read_past_a_phase():
+    assert [charge_of(name) for name in ("SO4-2(aq)", "Fe(OH)4-", "Ca+2", "CuS(ppt)")] == [
+        -2, -1, 2, 0,
+    ]  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    ("table", "line", "message"),
+    [
+        ("solids.tsv", None, "solids.tsv.*'NiS\\(aged\\)' stands in line"),
+        ("species.tsv", "XCl\tX+ + Cl- = XCl\t1.0\t\t\t0.1\tnone\tmemory\t", "species.tsv, row"),
+        (
+            "gases.tsv",
+            "CO2(q)\tCO2\tCO2(q) + H2O = CO3-2 + 2 H+\tmuch\t\t\t\t\t\t",
+            "gases.tsv, row",
+        ),
+    ],
+)
+def test_a_bad_row_is_refused_with_table_and_row(monkeypatch, tmp_path, table, line, message):
+    shipped = resources.files("dosewright.chemistry").joinpath("tables")
+    (tmp_path / "tables").mkdir()
+    for name in ("components.tsv", "species.tsv", "solids.tsv", "gases.tsv"):
+        text = shipped.joinpath(name).read_text("utf-8")
+        if name == table:
+            again = (
+                next(row for row in text.splitlines() if row.startswith("NiS(aged)"))
+                if (line is None)
+                else line
+            )
+            text += again + "\n"
+        (tmp_path / "tables" / name).write_text(text, "utf-8")
+    monkeypatch.setattr(catalogue_module.resources, "files", lambda _package: tmp_path)
+    with pytest.raises(catalogue_module.TableError, match=message):
+        catalogue_module.catalogue.__wrapped__()
 
 
 def test_molar_masses_against_the_handbook():

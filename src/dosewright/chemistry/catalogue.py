@@ -146,9 +146,14 @@ def _reaction(
 
 
 def _rows(table: str) -> Iterator[tuple[int, dict[str, str]]]:
+    """Yield line number and cells of each row of a table; ValueError where a name comes twice."""
     text = resources.files("dosewright.chemistry").joinpath("tables", table).read_text("utf-8")
     reader = csv.DictReader(text.splitlines(), delimiter="\t", quoting=csv.QUOTE_NONE)
+    seen: set[str] = set()
     for number, row in enumerate(reader, start=2):
+        if row["name"] in seen:
+            raise ValueError(f"'{row['name']}' stands in line {number} again")
+        seen.add(row["name"])
         yield number, {key: (value or "").strip() for key, value in row.items()}
 
 

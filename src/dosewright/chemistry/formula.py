@@ -21,13 +21,14 @@ ATOMIC_WEIGHT = MappingProxyType(
 
 _PHASE = re.compile(r"\((am|s|ppt|fresh|aged|green|pink|g|aq)\)$")
 _CHARGE = re.compile(r"([+-])(\d*)$")
-_TOKEN = re.compile(r"([A-Z][a-z]?)(\d+(?:\.\d+)?)?|(\()|(\))(\d+(?:\.\d+)?)?")
+#: whole subscripts only, so that the 7 of FeSO4.7H2O is not read as O4.7
+_TOKEN = re.compile(r"([A-Z][a-z]?)([1-9]\d*)?|(\()|(\))([1-9]\d*)?")
 _LEADING = re.compile(r"\d+(?:\.\d+)?")
 
 
 def charge_of(name: str) -> int:
-    """Return the charge in a name such as ``Fe(OH)4-`` or ``SO4-2``."""
-    match = _CHARGE.search(name)
+    """Return the charge in a name such as ``Fe(OH)4-`` or ``SO4-2(aq)``."""
+    match = _CHARGE.search(_PHASE.sub("", name))
     if match is None:
         return 0
     size = int(match.group(2) or 1)
@@ -59,8 +60,10 @@ def _group(body: str, formula: str, offset: int) -> dict[str, float]:
     while at < len(body):
         match = _TOKEN.match(body, at)
         if match is None:
+            hint = "; write ':' before water of crystallisation" if body[at] == "." else ""
             raise ValueError(
-                f"formula '{formula}': '{body[at]}' at position {offset + at + 1} is not understood"
+                f"formula '{formula}': '{body[at]}' at position {offset + at + 1} "
+                f"is not understood{hint}"
             )
         element, count, opening, closing, times = match.groups()
         if element is not None:
@@ -76,6 +79,8 @@ def _group(body: str, formula: str, offset: int) -> dict[str, float]:
             if len(stack) == 1:
                 raise ValueError(f"formula '{formula}': ')' at {offset + at + 1} opens nowhere")
             inner = stack.pop()
+            if not inner:
+                raise ValueError(f"formula '{formula}': empty brackets at {offset + at + 1}")
             for name, n in inner.items():
                 stack[-1][name] = stack[-1].get(name, 0.0) + n * float(times or 1)
         at = match.end()
