@@ -96,6 +96,14 @@ def test_a_pH_out_of_reach_is_said_so(tmp_path):
         dosewright.evaluate(flowsheet, flowsheet.decisions)
 
 
+def test_a_base_cannot_lower_the_pH(tmp_path):
+    file = tmp_path / "good.toml"
+    file.write_text(GOOD.replace('"pH 9.0"', '"pH 1.5"'), encoding="utf-8")
+    flowsheet = dosewright.load(file)
+    with pytest.raises(InputError, match="reach"):
+        dosewright.evaluate(flowsheet, flowsheet.decisions)
+
+
 BAD_BEAKERS = [
     ("", "pour"),
     ("[[pour]]\n", "volume or a mass"),

@@ -77,7 +77,7 @@ def test_values_end_in_the_units_their_names_say(every_key):
 
 
 def test_sulfide_limit_as_sulfur_is_kept_as_sulfur():
-    spec = {s.label: s for s in load(SHIPPED / "tessaly_row.toml").effluent.dissolved}["HS"]
+    spec = {s.label: s for s in load(SHIPPED / "tessaly_row.toml").effluent.dissolved}["HS as S"]
     assert spec.components == {"HS-": 1.0}
     assert spec.g_per_mol == pytest.approx(32.06)
     assert spec.max_mg_per_L == 0.5

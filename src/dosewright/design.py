@@ -70,6 +70,7 @@ class SearchRecord:
         could not be compared.
     exact_evaluations: trains solved on the exact model in all.
     best_cost_USD_per_h: cost of the design, by the exact model.
+    time_ran_out: the time limit, not a lack of better neighbours, ended the search.
     method: the way it was searched, in words.
     """
 
@@ -79,6 +80,7 @@ class SearchRecord:
     lattice_difference: float
     exact_evaluations: int
     best_cost_USD_per_h: float
+    time_ran_out: bool = False
     method: str = METHOD
 
 

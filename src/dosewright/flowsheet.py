@@ -440,7 +440,7 @@ def _limits(r: _Reading, where: str, value: Any) -> tuple[LimitSpec, ...]:
         if mg <= 0.0:
             r.fault(path, "a limit of zero cannot be met", "write the detection limit")
             continue
-        out.append(LimitSpec(name, label.components, grams, mg))
+        out.append(LimitSpec(f"{name} as {basis}" if basis else name, label.components, grams, mg))
     return tuple(out)
 
 

@@ -531,7 +531,7 @@ def meet_pH(
     """Find the amounts at which ``tank_pH(amount, rows)`` meets ``target`` (all arrays (N,)).
 
     ``rising`` says whether pH rises with the amount. Rows that cannot reach the target below
-    ``upper`` return NaN; rows that start beyond it return zero.
+    ``upper``, or that start beyond it, return NaN.
     """
     count = target.size
     grid = np.concatenate([[0.0], np.geomspace(1e-4, 1.0, 25)])
@@ -544,7 +544,8 @@ def meet_pH(
     reached = gap >= 0.0
     first = reached.argmax(axis=1)
     answer = np.full(count, np.nan)
-    answer[reached[:, 0]] = 0.0
+    # at the target already: no dose; beyond it: this reagent only leads further away
+    answer[reached[:, 0] & (gap[:, 0] < 1e-6)] = 0.0
     todo = np.flatnonzero(reached.any(axis=1) & ~reached[:, 0])
     low = upper[todo] * grid[first[todo] - 1]
     high = upper[todo] * grid[first[todo]]

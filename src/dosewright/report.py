@@ -105,6 +105,10 @@ def design_text(design: Design) -> str:
             "The linear model, anchored on this design, is off its exact cost by "
             f"{100.0 * record.lattice_difference:+.1f} % of the sum of its cost lines."
         )
+    if record.time_ran_out:
+        page.line(
+            "The time limit ended it: with a longer --time-limit it may find a cheaper train."
+        )
     page.line("Least cost is what this search found, not proven.")
     return page.text()
 
@@ -129,6 +133,9 @@ def _trial(page: _Page, trial: Trial) -> None:
         page.line(f"Misses {len(trial.shortfalls)} of the limits entered:")
         for shortfall in trial.shortfalls:
             page.line(f"  {shortfall}")
+    stops = sum(caution.level == "stop" for caution in trial.cautions)
+    if stops:
+        page.line(f"{stops} caution{'s' if stops > 1 else ''} at level STOP: see Cautions below.")
     for note in trial.notes:
         page.line(f"Note: {note}.")
     _feed(page, trial)

@@ -199,7 +199,7 @@ def stage_reports(run: Run, destinations: Sequence[str]) -> list[StageReport]:
                 vented_mol_per_h=_named(system.gases, stage.vented_mol_per_h[0]),
                 heat_K=float(stage.heat_K[0]),
                 solids_kg_per_h=_named(
-                    system.solids, stage.pulp.solids[0] * model.solid_g_per_mol / 1000.0
+                    system.solids, stage.cake.solids[0] * model.solid_g_per_mol / 1000.0
                 ),
                 cake_dry_kg_per_h=dry,
                 cake_wet_kg_per_h=float(figures.wet_kg[0]),

@@ -65,6 +65,7 @@ class _Search:
     proposals: int = 0
     lattice_value: float = float("nan")
     evaluations: int = 0
+    cut_short: bool = False
     pool: ThreadPoolExecutor = field(default_factory=lambda: ThreadPoolExecutor(BATCH))
 
     @property
@@ -355,6 +356,7 @@ def _descend(search: _Search, seeds: list[Polished], stop: float) -> None:
             tried: list[Polished] = []
             for batch in batched(fresh, BATCH):
                 if time.monotonic() > stop:
+                    search.cut_short = True
                     return
                 results = [search.trimmed(r) for r in search.polish_all(batch)]
                 tried += results
@@ -367,6 +369,7 @@ def _descend(search: _Search, seeds: list[Polished], stop: float) -> None:
             close = sorted((r for r in tried if search.is_close(r, centre)), key=_merit)
             for batch_of in batched(close[:SECOND_LOOKS], BATCH):
                 if time.monotonic() > stop:
+                    search.cut_short = True
                     return
                 earnest = [(r.structure, _earnest(search, r)) for r in batch_of]
                 centre, better = _move(centre, search.polish_all(earnest))
@@ -454,5 +457,6 @@ def _design(search: _Search, agreement: float) -> Design:
         lattice_difference=agreement,
         exact_evaluations=search.evaluations,
         best_cost_USD_per_h=trial.cost_per_hour,
+        time_ran_out=search.cut_short,
     )
     return Design.of(trial, record)
